@@ -1,0 +1,1 @@
+"""Which broken regression assumption matters at your sample size, on your own design matrix."""

@@ -1,0 +1,112 @@
+"""Where tasks run: in this process, in worker processes, or on a Dask cluster. All are `concurrent.futures` executors."""
+
+from __future__ import annotations
+
+import multiprocessing
+from collections.abc import Iterator
+from concurrent.futures import Executor, Future, ProcessPoolExecutor
+from contextlib import contextmanager
+from typing import Any
+
+from threadpoolctl import threadpool_limits
+
+from withstand.engine.block import Active, CellKey, Kernel
+from withstand.engine.job import Job
+from withstand.engine.tally import Tally
+from withstand.errors import InputError
+
+Results = dict[CellKey, list[Tally | None]]
+
+_kernels: dict[str, Kernel] = {}
+"""One kernel a process, kept between tasks of the same job."""
+
+
+def run_task(job: Job, token: str, task: int, active: Active) -> Results:
+    """Run one task in whatever process this is, with linear algebra held to one thread.
+
+    Parameters
+    ----------
+    job : Job
+        What to do.
+    token : str
+        Names the job within the run, so that a worker keeps its kernel.
+    task : int
+        Which range of blocks.
+    active : mapping
+        Procedures to judge, by world.
+    """
+    if token not in _kernels:
+        _kernels.clear()
+        _kernels[token] = Kernel(job)
+    first = task * job.blocks_per_task
+    with threadpool_limits(1):
+        return _kernels[token].run(range(first, first + job.blocks_per_task), active)
+
+
+class InProcess(Executor):
+    """Runs every task at once in this process: for one worker, and for code that cannot cross process borders."""
+
+    def submit(self, fn: Any, /, *args: Any, **kwargs: Any) -> Future[Any]:
+        """Run now; the future is done when this returns."""
+        future: Future[Any] = Future()
+        try:
+            future.set_result(fn(*args, **kwargs))
+        except BaseException as error:
+            if not isinstance(error, Exception):
+                raise
+            future.set_exception(error)
+        return future
+
+
+@contextmanager
+def open_executor(workers: int = 1, cluster: str | None = None) -> Iterator[Executor]:
+    """Open an executor.
+
+    Parameters
+    ----------
+    workers : int
+        Worker processes; 1 runs in this process.
+    cluster : str, optional
+        Address of a Dask scheduler, used instead.
+
+    Raises
+    ------
+    InputError
+        If the cluster's library is not installed or the address does not answer.
+    """
+    if cluster is not None:
+        with _dask(cluster) as executor:
+            yield executor
+    elif workers == 1:
+        yield InProcess()
+    else:
+        # A fresh interpreter a worker: a forked one would inherit the state of threaded libraries.
+        pool = ProcessPoolExecutor(workers, mp_context=multiprocessing.get_context("spawn"))
+        try:
+            yield pool
+        finally:
+            pool.shutdown(wait=True, cancel_futures=True)
+
+
+@contextmanager
+def _dask(address: str) -> Iterator[Executor]:
+    try:
+        from distributed import Client
+    except ImportError as error:
+        raise InputError(
+            "a cluster needs the library 'distributed', which is not installed",
+            where="--cluster",
+            remedy='Install it with: pip install "withstand[cluster]".',
+        ) from error
+    try:
+        client = Client(address, timeout="10s")
+    except (OSError, ValueError, TimeoutError) as error:
+        raise InputError(
+            f"no Dask scheduler answers at '{address}' ({error})",
+            where="--cluster",
+            remedy="Start one, or leave --cluster out to use this machine.",
+        ) from error
+    try:
+        yield client.get_executor(pure=False)
+    finally:
+        client.close()

@@ -1,0 +1,148 @@
+"""The stored tallies of a run: one SQLite file, one transaction a task, so that a killed run goes on where it was."""
+
+from __future__ import annotations
+
+import sqlite3
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+
+from withstand.engine.tally import Tally
+from withstand.errors import LedgerError
+from withstand.study.design import Floats
+
+_FORMAT = "1"
+_SCHEMA = """
+CREATE TABLE IF NOT EXISTS about (key TEXT PRIMARY KEY, value TEXT NOT NULL) STRICT;
+CREATE TABLE IF NOT EXISTS tallies (
+    job TEXT NOT NULL, world TEXT NOT NULL, procedure TEXT NOT NULL,
+    tasks INTEGER NOT NULL, applies TEXT NOT NULL, sums BLOB NOT NULL,
+    PRIMARY KEY (job, world, procedure)
+) STRICT;
+"""
+
+LedgerKey = tuple[str, str, str]
+"""Digest of the job, key of the world, identity of the procedure."""
+
+
+@dataclass(frozen=True, eq=False)
+class Entry:
+    """The tallies of one world and procedure over tasks 0 .. tasks - 1.
+
+    Parameters
+    ----------
+    tasks : int
+        Tasks merged so far, always from the first without a gap.
+    tallies : list of Tally or None
+        One a focal quantity; None where the procedure does not apply.
+    """
+
+    tasks: int
+    tallies: list[Tally | None]
+
+
+class Ledger:
+    """Tallies by job, world and procedure.
+
+    Parameters
+    ----------
+    path : Path or None
+        Where to keep them; None keeps them in memory.
+
+    Raises
+    ------
+    LedgerError
+        If the file is not a ledger of this format, or cannot be opened.
+    """
+
+    def __init__(self, path: Path | None = None) -> None:
+        self.path = path
+        self._where = "ledger" if path is None else str(path)
+        try:
+            self._db = sqlite3.connect(":memory:" if path is None else path, isolation_level=None)
+            self._db.execute("PRAGMA journal_mode=WAL")
+            names = {row[0] for row in self._db.execute("SELECT name FROM sqlite_master WHERE type = 'table'")}
+            if names and not {"about", "tallies"} <= names:
+                raise LedgerError(
+                    "this SQLite file is not a ledger of withstand", where=self._where, remedy="Give another folder with --out."
+                )
+            self._db.executescript(_SCHEMA)
+            self._db.execute("INSERT OR IGNORE INTO about VALUES ('format', ?)", (_FORMAT,))
+            found = self._db.execute("SELECT value FROM about WHERE key = 'format'").fetchone()[0]
+        except sqlite3.DatabaseError as error:
+            raise LedgerError(
+                f"the ledger cannot be read ({error})",
+                where=self._where,
+                remedy="If it is damaged, start over with --fresh; check that the folder can be written to.",
+            ) from error
+        if found != _FORMAT:
+            raise LedgerError(
+                f"the ledger has format {found}, this version reads {_FORMAT}",
+                where=self._where,
+                remedy="Start over with --fresh or give another folder with --out.",
+            )
+
+    def claim(self, owner: str) -> None:
+        """Tie the ledger to one study.
+
+        Raises
+        ------
+        LedgerError
+            If it already belongs to another.
+        """
+        self._db.execute("INSERT OR IGNORE INTO about VALUES ('owner', ?)", (owner,))
+        found = self._db.execute("SELECT value FROM about WHERE key = 'owner'").fetchone()[0]
+        if found != owner:
+            raise LedgerError(
+                "the ledger belongs to another study, seed or version of the data",
+                where=self._where,
+                remedy="Give another folder with --out, or start over here with --fresh.",
+            )
+
+    def read(self, key: LedgerKey) -> Entry:
+        """The entry of a key; zero tasks if there is none."""
+        row = self._db.execute(
+            "SELECT tasks, applies, sums FROM tallies WHERE job = ? AND world = ? AND procedure = ?", key
+        ).fetchone()
+        if row is None:
+            return Entry(0, [])
+        tasks, applies, blob = row
+        flat: Floats = np.frombuffer(blob, dtype="<f8")
+        parts = iter(flat.reshape(applies.count("1"), -1) if "1" in applies else [])
+        return Entry(tasks, [Tally.unpack(next(parts)) if flag == "1" else None for flag in applies])
+
+    def write(self, entries: Mapping[LedgerKey, Entry]) -> None:
+        """Store entries in one transaction.
+
+        Raises
+        ------
+        LedgerError
+            If the disk is full or the file cannot be written.
+        """
+        rows = [
+            (
+                *key,
+                entry.tasks,
+                "".join("0" if tally is None else "1" for tally in entry.tallies),
+                b"".join(tally.pack().astype("<f8").tobytes() for tally in entry.tallies if tally is not None),
+            )
+            for key, entry in entries.items()
+        ]
+        try:
+            self._db.execute("BEGIN IMMEDIATE")
+            self._db.executemany("INSERT OR REPLACE INTO tallies VALUES (?, ?, ?, ?, ?, ?)", rows)
+            self._db.execute("COMMIT")
+        except sqlite3.Error as error:
+            if self._db.in_transaction:
+                self._db.execute("ROLLBACK")
+            raise LedgerError(
+                f"the ledger cannot be written ({error})",
+                where=self._where,
+                remedy="Free some disk space or give another folder with --out; what was stored before is intact.",
+            ) from error
+
+    def close(self) -> None:
+        """Close the file."""
+        self._db.close()

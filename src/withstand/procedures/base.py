@@ -1,0 +1,158 @@
+"""What a procedure is: an estimator with its interval and test, fitted to a whole block of replicates at once.
+
+A procedure registers itself here; the command line, the lists, the documentation table and the contract tests read the
+registry. Options are dataclass fields with defaults, so that `identity` can name every variant.
+"""
+
+from __future__ import annotations
+
+from abc import ABC, abstractmethod
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, fields
+from typing import Any, ClassVar, TypeVar
+
+import numpy as np
+from scipy import stats
+
+from withstand.errors import ScenarioError, nearest
+from withstand.procedures.fit import Fit, WaldFit
+from withstand.procedures.forms import ResidualForm
+from withstand.procedures.sample import Sample
+from withstand.study.design import Design, Floats
+from withstand.study.focus import Focus, FocusKind
+
+Fitter = Callable[[Sample], list[Fit]]
+"""Fits one block; the fits are in the order of the focal quantities the fitter was prepared for."""
+
+
+@dataclass(frozen=True)
+class Procedure(ABC):
+    """An estimator with its interval and test."""
+
+    name: ClassVar[str]
+    family: ClassVar[str]
+    title: ClassVar[str]
+    formula: ClassVar[str]
+    source: ClassVar[str]
+    equivariant: ClassVar[bool] = True
+    """Whether adding X beta to the response adds beta to the estimate and scaling the response scales it, so that one block
+    of errors gives coverage, size and power."""
+
+    @property
+    def identity(self) -> str:
+        """Name, with every option that is not at its default."""
+        changed = [f"{f.name}={getattr(self, f.name)}" for f in fields(self) if getattr(self, f.name) != f.default]
+        return f"{self.name}({', '.join(changed)})" if changed else self.name
+
+    def not_applicable(self, design: Design, focus: Focus) -> str | None:
+        """Why the procedure has no answer for this focus on this design, 'because' included; None if it has."""
+        return None
+
+    @abstractmethod
+    def prepare(self, design: Design, foci: Sequence[Focus], level: float) -> Fitter:
+        """Do once all that depends on the design alone.
+
+        Parameters
+        ----------
+        design : Design
+            The rows.
+        foci : sequence of Focus
+            Focal quantities to answer for, all applicable.
+        level : float
+            Confidence level; tests are at 1 - level.
+
+        Returns
+        -------
+        callable
+            Maps a Sample to one Fit a focus.
+        """
+
+
+@dataclass(frozen=True)
+class LinearProcedure(Procedure):
+    """An estimate linear in the response, with a variance estimate quadratic in the residuals.
+
+    These are the procedures that have exact answers under normal errors.
+    """
+
+    weighted: ClassVar[bool] = False
+    """Whether the fit uses the study's known weights."""
+
+    @abstractmethod
+    def form(self, design: Design, A: Floats) -> ResidualForm:
+        """The variance estimate of A y, A (k, n), on the design actually fitted."""
+
+    def degrees_of_freedom(self, design: Design, A: Floats) -> float:
+        """Degrees of freedom of the reference distribution; n - p unless the procedure says otherwise."""
+        return design.df
+
+    def critical(self, design: Design, A: Floats, level: float) -> float:
+        """Critical value: of |t| for k = 1, of the statistic divided by k otherwise."""
+        k = A.shape[0]
+        df = self.degrees_of_freedom(design, A)
+        if k == 1:
+            return float(stats.t.isf((1.0 - level) / 2.0, df))
+        return float(stats.f.isf(1.0 - level, k, df))
+
+    def fitted_design(self, design: Design) -> Design:
+        """The design actually fitted: with known weights, the weighted one."""
+        return design.weighted if self.weighted else design
+
+    def prepare(self, design: Design, foci: Sequence[Focus], level: float) -> Fitter:
+        """See Procedure."""
+        used = self.fitted_design(design)
+        constants = []
+        for focus in foci:
+            A = used.estimator(focus.L)
+            predicts = focus.kind is FocusKind.NEW
+            constants.append((used.basis_rows(focus.L), self.form(used, A), self.critical(used, A, level), predicts))
+
+        def fit(sample: Sample) -> list[Fit]:
+            seen = sample.weighted if self.weighted else sample
+            fits: list[Fit] = []
+            for basis, form, critical, predicts in constants:
+                covariance = form.evaluate(seen)
+                if predicts:
+                    covariance = covariance + seen.residual_sum / used.df
+                fits.append(WaldFit(basis @ seen.projections, None, covariance, critical))
+            return fits
+
+        return fit
+
+
+T = TypeVar("T", bound=Procedure)
+
+REGISTRY: dict[str, type[Procedure]] = {}
+"""Every procedure by name, in the order of registration."""
+
+
+def register(cls: type[T]) -> type[T]:
+    """Class decorator: make a procedure known by its name."""
+    REGISTRY[cls.name] = cls
+    return cls
+
+
+def make_procedure(spec: str | Procedure, **options: Any) -> Procedure:
+    """A procedure from its name and options; a procedure is returned as it is.
+
+    Raises
+    ------
+    ScenarioError
+        If the name or an option is unknown; the message offers the nearest one.
+    """
+    if isinstance(spec, Procedure):
+        return spec
+    if spec not in REGISTRY:
+        raise ScenarioError(f"unknown procedure '{spec}'", where="procedures.use", remedy=nearest(spec, REGISTRY))
+    cls = REGISTRY[spec]
+    known = [f.name for f in fields(cls)]
+    for option in options:
+        if option not in known:
+            remedy = nearest(option, known) if known else "It takes no options."
+            raise ScenarioError(f"procedure '{spec}' has no option '{option}'", where="procedures.use", remedy=remedy)
+    return cls(**options)
+
+
+def pairwise(A: Floats) -> Floats:
+    """Products a_i,t a_j,t of all pairs of rows of A (k, n), as (k, k, n)."""
+    return np.asarray(A[:, None, :] * A[None, :, :])

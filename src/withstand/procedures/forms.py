@@ -1,0 +1,140 @@
+"""Variance estimates that are quadratic forms in the residuals: e' D e, one D for each pair of focal rows.
+
+The classical and every sandwich variance is one of three shapes. The simulator evaluates them on blocks; the exact answers
+read the same matrices, so that both rest on a single definition.
+"""
+
+from __future__ import annotations
+
+from abc import ABC, abstractmethod
+from dataclasses import dataclass
+
+import numpy as np
+
+from withstand.procedures.sample import Sample
+from withstand.study.design import Floats
+
+
+@dataclass(frozen=True, eq=False)
+class ResidualForm(ABC):
+    """A k x k matrix of quadratic forms in the residuals."""
+
+    @property
+    @abstractmethod
+    def k(self) -> int:
+        """Rows of the focal quantity."""
+
+    @abstractmethod
+    def evaluate(self, sample: Sample) -> Floats:
+        """Covariance estimates (k, k, B) from the residuals of the sample."""
+
+    @abstractmethod
+    def times(self, M: Floats) -> Floats:
+        """D M, (n, m), for a scalar focal quantity, never forming D."""
+
+
+@dataclass(frozen=True, eq=False)
+class Diagonal(ResidualForm):
+    """V_ij = sum_t d_ij,t e_t^2.
+
+    Parameters
+    ----------
+    weights : ndarray of shape (k, k, n)
+        d, symmetric in its first two axes.
+    """
+
+    weights: Floats
+
+    @property
+    def k(self) -> int:
+        """See ResidualForm."""
+        return self.weights.shape[0]
+
+    def evaluate(self, sample: Sample) -> Floats:
+        """See ResidualForm."""
+        k = self.k
+        return np.asarray((self.weights.reshape(k * k, -1) @ sample.squared_residuals).reshape(k, k, -1))
+
+    def times(self, M: Floats) -> Floats:
+        """See ResidualForm."""
+        return np.asarray(self.weights[0, 0][:, None] * M)
+
+
+@dataclass(frozen=True, eq=False)
+class Banded(ResidualForm):
+    """V_ij = scale * sum_l w_l sum_t (a_i,t e_t)(a_j,t-l e_t-l), symmetrised, lag weights w_0 = 1, w_1, ..., w_L.
+
+    Parameters
+    ----------
+    rows : ndarray of shape (k, n)
+        a.
+    lag_weights : ndarray of shape (L + 1,)
+        w.
+    scale : float
+        Small-sample factor.
+    """
+
+    rows: Floats
+    lag_weights: Floats
+    scale: float
+
+    @property
+    def k(self) -> int:
+        """See ResidualForm."""
+        return self.rows.shape[0]
+
+    def evaluate(self, sample: Sample) -> Floats:
+        """See ResidualForm."""
+        k, n = self.rows.shape
+        scores = [np.multiply(self.rows[i][:, None], sample.residuals, out=sample.buffer(f"scores {i}")) for i in range(k)]
+        result = np.zeros((k, k, sample.width))
+        for i in range(k):
+            for j in range(i, k):
+                total = np.einsum("tb,tb->b", scores[i], scores[j])
+                for lag, weight in enumerate(self.lag_weights[1:], start=1):
+                    total += weight * np.einsum("tb,tb->b", scores[i][lag:], scores[j][: n - lag])
+                    total += weight * np.einsum("tb,tb->b", scores[j][lag:], scores[i][: n - lag])
+                result[i, j] = result[j, i] = self.scale * total
+        return result
+
+    def times(self, M: Floats) -> Floats:
+        """See ResidualForm."""
+        a = self.rows[0][:, None]
+        scored = a * M
+        total = scored.copy()
+        for lag, weight in enumerate(self.lag_weights[1:], start=1):
+            total[lag:] += weight * scored[:-lag]
+            total[:-lag] += weight * scored[lag:]
+        return np.asarray(self.scale * a * total)
+
+
+@dataclass(frozen=True, eq=False)
+class Squares(ResidualForm):
+    """V_ij = scale * sum_r (b_i,r' e)(b_j,r' e): clusters, or an orthogonal series.
+
+    Parameters
+    ----------
+    rows : ndarray of shape (k, m, n)
+        b.
+    scale : float
+        Small-sample factor.
+    """
+
+    rows: Floats
+    scale: float
+
+    @property
+    def k(self) -> int:
+        """See ResidualForm."""
+        return self.rows.shape[0]
+
+    def evaluate(self, sample: Sample) -> Floats:
+        """See ResidualForm."""
+        k, m, n = self.rows.shape
+        parts = (self.rows.reshape(k * m, n) @ sample.residuals).reshape(k, m, -1)
+        return np.asarray(self.scale * np.einsum("irb,jrb->ijb", parts, parts))
+
+    def times(self, M: Floats) -> Floats:
+        """See ResidualForm."""
+        rows = self.rows[0]
+        return np.asarray(self.scale * (rows.T @ (rows @ M)))

@@ -1,0 +1,1 @@
+"""Scenario files: their schema, loading them into a study and a plan, and scaffolding new ones."""

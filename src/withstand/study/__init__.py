@@ -1,0 +1,1 @@
+"""What the user has: a table or a plan, a model formula, and the quantities the decision hangs on."""
