@@ -91,7 +91,8 @@ class Kernel:
         return totals
 
     def _block(self, block: int, active: Active) -> dict[CellKey, list[Tally | None]]:
-        self._use(self.job.study.rows.draw(design_generator(self.job.seed, block)))
+        rows = self.job.study.rows
+        self._use(rows.draw(design_generator(self.job.seed, block)) if self._fresh else self.job.study.design)
         noise = BlockNoise(self.job.seed, block, self.job.width, self._noise_buffers)
         wanted = sorted({procedure for procedures in active.values() for procedure in procedures})
         self._visit(BASELINE, wanted, noise)

@@ -1,0 +1,69 @@
+"""What a report needs to say about the study and to repeat the run: facts and provenance, as plain values."""
+
+from __future__ import annotations
+
+import platform
+from importlib import metadata
+from typing import Any
+
+from withstand.lab.plan import Plan
+from withstand.study.facts import design_facts
+from withstand.study.study import Study
+
+_LIBRARIES = ("withstand", "numpy", "scipy", "pandas", "statsmodels", "formulaic")
+
+
+def study_facts(study: Study) -> dict[str, Any]:
+    """Design, reference fit and focus, for people; of plain Python types throughout.
+
+    Parameters
+    ----------
+    study : Study
+        What the user has.
+    """
+    facts: dict[str, Any] = {
+        "name": study.name,
+        "formula": study.formula,
+        "n": study.n,
+        "p": study.design.p,
+        "df": study.design.df,
+        "level": study.level,
+        "error_sd": float(study.error_sd),
+        "rows_mode": "fixed" if study.rows.fixed else "drawn anew in each block",
+        "focus": [
+            {
+                "name": focus.name,
+                "kind": str(focus.kind),
+                "effect": None if focus.effect is None else [float(value) for value in focus.effect],
+            }
+            for focus in study.focus
+        ],
+    }
+    if study.account is not None:
+        facts |= {"rows_read": study.account.read, "dropped": dict(study.account.dropped)}
+    return facts | design_facts(study).as_record()
+
+
+def library_versions() -> dict[str, str]:
+    """Versions of what computed the numbers."""
+    versions = {"python": platform.python_version()}
+    for name in _LIBRARIES:
+        versions[name] = metadata.version(name)
+    return versions
+
+
+def tolerance_record(plan: Plan, level: float) -> dict[str, Any]:
+    """The tolerance in numbers, with who set it."""
+    low, high = plan.tolerance.size_range(1.0 - level)
+    coverage_low, coverage_high = plan.tolerance.coverage_range(1.0 - level)
+    return {
+        "size": plan.tolerance.size if isinstance(plan.tolerance.size, str) else list(plan.tolerance.size),
+        "low": low,
+        "high": high,
+        "coverage_low": coverage_low,
+        "coverage_high": coverage_high,
+        "source": plan.tolerance.source,
+        "bias": plan.tolerance.bias,
+        "bias_absolute": plan.tolerance.bias_absolute,
+        "tails": plan.tolerance.tails,
+    }
