@@ -1,1 +1,45 @@
-"""Which broken regression assumption matters at your sample size, on your own design matrix."""
+"""Which broken regression assumption matters at your sample size, on your own design matrix.
+
+Names are loaded when first used, so that the command line answers `--help` without loading the numerical libraries.
+"""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import Any
+
+_HOME = {
+    "Bowtie": "departures",
+    "Clusters": "departures",
+    "Contaminated": "departures",
+    "Curvature": "departures",
+    "Custom": "procedures",
+    "Fan": "departures",
+    "HeavyTails": "departures",
+    "LevelSpread": "departures",
+    "Outliers": "departures",
+    "PowerSpread": "departures",
+    "Pretest": "diagnostics",
+    "Result": "report",
+    "Serial": "departures",
+    "Skew": "departures",
+    "Study": "study",
+    "Tolerance": "judgement",
+    "WithstandError": "errors",
+    "WorstFan": "departures",
+    "inspect": "front",
+    "run": "front",
+    "size": "front",
+}
+
+__all__ = sorted(_HOME)
+
+
+def __getattr__(name: str) -> Any:
+    if name not in _HOME:
+        raise AttributeError(f"module 'withstand' has no attribute '{name}'")
+    return getattr(import_module(f"withstand.{_HOME[name]}"), name)
+
+
+def __dir__() -> list[str]:
+    return __all__

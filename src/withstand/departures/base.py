@@ -13,7 +13,6 @@ from abc import ABC, abstractmethod
 from collections.abc import Sequence
 from dataclasses import dataclass, fields
 from enum import StrEnum
-from numbers import Real
 from typing import ClassVar, Protocol, TypeVar
 
 import numpy as np
@@ -85,9 +84,8 @@ def as_ladder(given: float | Sequence[float]) -> tuple[float, ...]:
     ScenarioError
         If a value is not a number.
     """
-    values = (given,) if isinstance(given, (Real, str)) else given
     try:
-        return tuple(float(value) for value in values)
+        return tuple(float(value) for value in np.atleast_1d(np.asarray(given, dtype=np.float64)))
     except (TypeError, ValueError) as error:
         raise ScenarioError(
             f"severity {given!r} is not a number or a list of numbers",

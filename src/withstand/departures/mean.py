@@ -32,11 +32,12 @@ class _Bend:
     half: float
 
     def __call__(self, v: Floats | float) -> Floats:
-        return np.asarray(legendre.legval((np.asarray(v) - self.centre) / self.half, self.terms))
+        return np.asarray(legendre.legval((np.asarray(v) - self.centre) / self.half, self.terms), dtype=np.float64)
 
     def slope(self, v: Floats) -> Floats:
-        """Dg/dv, in error SDs per unit of v."""
-        return np.asarray(legendre.legval((v - self.centre) / self.half, legendre.legder(self.terms))) / self.half
+        """The derivative of g in v, in error SDs per unit of v."""
+        t = (v - self.centre) / self.half
+        return np.asarray(legendre.legval(t, legendre.legder(self.terms)) / self.half, dtype=np.float64)
 
 
 @register

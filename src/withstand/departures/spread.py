@@ -1,4 +1,4 @@
-"""The spread layer: the error SD changes over the rows."""
+"""The spread layer: the error SD changes over the range of a variable."""
 
 from __future__ import annotations
 
@@ -7,9 +7,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from withstand.departures.along import FITTED, column_along, factor_along, value_at
+from withstand.departures.along import FITTED, column_along, value_at
 from withstand.departures.base import SpreadDeparture, register
-from withstand.errors import ScenarioError, nearest
+from withstand.errors import ScenarioError
 from withstand.study.design import Design, Floats
 from withstand.study.focus import Point
 
@@ -58,7 +58,7 @@ class RangeSpread(RatioSpread):
 
     @abstractmethod
     def exponent(self, t: Floats) -> Floats:
-        """F(t), from 0 to 1."""
+        """The exponent f(t), from 0 to 1."""
 
     def _place(self, design: Design, z: Floats) -> Floats:
         """(z - min) / (max - min) with the range of the rows."""
@@ -146,139 +146,3 @@ class Bowtie(RangeSpread):
         """See RangeSpread."""
         ends = np.abs(2.0 * t - 1.0)
         return np.asarray(1.0 - ends if self.spindle else ends)
-
-
-@register
-@dataclass(frozen=True)
-class PowerSpread(SpreadDeparture):
-    """The error SD is a power of a positive variable.
-
-    Parameters
-    ----------
-    severity : float or sequence of float
-        Exponent k of SD proportional to z^k: 0 constant, 0.5 as for counts, 1 constant coefficient of variation.
-    along : str
-        A positive numeric column, or "fitted" for the reference fitted mean.
-    """
-
-    along: str = FITTED
-
-    kind = "power-spread"
-    title = "error SD a power of a variable"
-    unit = "power of the variable the SD follows"
-    neutral = 0.0
-    default_ladder = (0.5, 1.0, 2.0)
-    construction = "s = z^k, mean square 1; z positive"
-    source = "power-of-the-mean variance; Box & Hill (1974)"
-
-    def check(self, severity: float) -> None:
-        """See Departure."""
-        if not 0.0 <= severity <= 10.0:
-            raise self.refuse(severity, "a number from 0 to 10")
-
-    def label(self, severity: float) -> str:
-        """See Departure."""
-        return f"SD as power {severity:g}"
-
-    def not_applicable(self, design: Design) -> str | None:
-        """See Departure."""
-        z = column_along(design, self.along, self.kind)
-        if z.min() <= 0.0:
-            return (
-                f"not applicable, because '{self.along}' goes down to {z.min():g} and a power of it needs positive values; "
-                "use fan, or name a positive column"
-            )
-        if np.ptp(z) == 0.0:
-            return f"not applicable, because '{self.along}' is the same in every row; name a column that varies"
-        return None
-
-    def profile(self, design: Design, severity: float) -> Floats:
-        """See SpreadDeparture."""
-        return np.power(self._ratio(design, column_along(design, self.along, self.kind)), severity)
-
-    def profile_at(self, design: Design, point: Point, severity: float) -> float:
-        """See SpreadDeparture. The power law is continued beyond the range of the rows."""
-        return float(np.power(self._ratio(design, np.array([value_at(point, self.along, self.kind)])), severity)[0])
-
-    def _ratio(self, design: Design, z: Floats) -> Floats:
-        """Z over its largest value on the rows, which keeps high powers finite."""
-        if not z.min() > 0.0:
-            raise ScenarioError(
-                f"'power-spread' along '{self.along}' meets the value {z.min():g}, whose powers are not positive",
-                where="departure.along",
-                remedy="Use fan, or a column and points with positive values.",
-            )
-        return np.asarray(z / column_along(design, self.along, self.kind).max())
-
-
-@register
-@dataclass(frozen=True)
-class LevelSpread(RatioSpread):
-    """Some levels of a factor have a larger error SD than the others.
-
-    Parameters
-    ----------
-    severity : float or sequence of float
-        Ratio of the error SD in the noisy levels to that in the others, 1 or more.
-    along : str
-        A categorical column.
-    noisy : tuple of str
-        The noisy levels; at least one, and not all.
-    """
-
-    along: str = ""
-    noisy: tuple[str, ...] = ()
-
-    kind = "level-spread"
-    title = "error SD larger in some levels of a factor"
-    construction = "s = ratio in the noisy levels, 1 in the others, mean square 1"
-    source = "unequal group variances; Scheffe (1959), ch. 10"
-
-    def __post_init__(self) -> None:
-        super().__post_init__()
-        levels = (self.noisy,) if isinstance(self.noisy, str) else self.noisy
-        object.__setattr__(self, "noisy", tuple(levels))
-
-    @property
-    def name(self) -> str:
-        """See Departure."""
-        return f"{super().name}, noisy {', '.join(self.noisy)}" if self.noisy else super().name
-
-    def not_applicable(self, design: Design) -> str | None:
-        """See Departure."""
-        noisy = self._noisy_rows(design)
-        if noisy.all() or not noisy.any():
-            return (
-                f"not applicable, because {'every row' if noisy.all() else 'no row'} is in the noisy levels of '{self.along}'; "
-                "name levels that some rows have and others have not"
-            )
-        return None
-
-    def profile(self, design: Design, severity: float) -> Floats:
-        """See SpreadDeparture."""
-        return np.where(self._noisy_rows(design), severity, 1.0)
-
-    def profile_at(self, design: Design, point: Point, severity: float) -> float:
-        """See SpreadDeparture."""
-        if self.along not in point.levels:
-            raise ScenarioError(
-                f"'level-spread' acts along '{self.along}', and the point of the focus gives no level of it",
-                where="study.focus.at",
-                remedy=f'Add {self.along} = "..." to the point.',
-            )
-        return severity if point.levels[self.along] in self.noisy else 1.0
-
-    def _noisy_rows(self, design: Design) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
-        factor = factor_along(design, self.along, self.kind)
-        for level in self.noisy:
-            if level not in factor.levels:
-                raise ScenarioError(
-                    f"'{self.along}' has no level '{level}'", where="departure.noisy", remedy=nearest(level, factor.levels)
-                )
-        if not self.noisy:
-            raise ScenarioError(
-                f"'level-spread' along '{self.along}' does not say which levels are noisy",
-                where="departure.noisy",
-                remedy=f"Name one or more of: {', '.join(factor.levels)}.",
-            )
-        return np.isin(factor.codes, [factor.levels.index(level) for level in self.noisy])

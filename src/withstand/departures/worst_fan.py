@@ -33,7 +33,7 @@ class WorstFan(RatioSpread):
     -----
     With a = row (X'X)^-1 X' and leverages h, the ratio of true to claimed variance is proportional to
     sum a_i^2 s_i^2 / sum (1 - h_i) s_i^2. A ratio of two linear forms in s_i^2 in [1, r^2] is largest where every s_i is at an
-    end, s_i = r where a_i^2 / (1 - h_i) lies above some level: n - 1 cut points are searched. For a new response the numerator
+    end, s_i = r where a_i^2 / (1 - h_i) lies above some level: n cut points are searched. For a new response the numerator
     has the variance at the new point besides, which is largest at r^2.
     """
 
@@ -65,15 +65,13 @@ class WorstFan(RatioSpread):
                 where="departure.against",
                 remedy="Name a coefficient, a contrast, a mean or a new response.",
             )
-        return replace(
-            self, against=focus.name, row=tuple(float(x) for x in focus.L[0]), new=focus.kind is FocusKind.NEW
-        )
+        return replace(self, against=focus.name, row=tuple(float(x) for x in focus.L[0]), new=focus.kind is FocusKind.NEW)
 
     def not_applicable(self, design: Design) -> str | None:
         """See Departure."""
         gain, claim = self._forms(design)
         # Proportional forms: no profile moves the ratio.
-        if np.ptp(gain * claim.sum() - claim * gain.sum()) <= 1e-12 * claim.sum() * gain.sum():
+        if not self.new and np.ptp(gain * claim.sum() - claim * gain.sum()) <= 1e-12 * claim.sum() * gain.sum():
             return (
                 "not applicable, because on this design no spread profile makes the claimed variance too small; "
                 "name another focal quantity"
@@ -87,11 +85,9 @@ class WorstFan(RatioSpread):
         merit = np.divide(gain, claim, out=np.where(gain > 0.0, np.inf, 0.0), where=claim > 0.0)
         order = np.argsort(-merit, kind="stable")
         extra = severity**2 - 1.0
-        top = gain.sum() + extra * np.cumsum(gain[order])
-        if self.new:
-            top += severity**2
-        bottom = claim.sum() + extra * np.cumsum(claim[order])
-        noisy = int(np.argmax((top / bottom)[:-1])) + 1
+        top = gain.sum() + extra * _sums(gain[order]) + (severity**2 if self.new else 0.0)
+        bottom = claim.sum() + extra * _sums(claim[order])
+        noisy = int(np.argmax(top / bottom))
         result = np.ones(design.n)
         result[order[:noisy]] = severity
         return result
@@ -117,4 +113,12 @@ class WorstFan(RatioSpread):
         a = design.estimator(np.array([self.row]))[0]
         claim = 1.0 - design.leverage
         claim[design.saturated_rows] = 0.0
-        return a**2, claim
+        gain = a**2
+        # What rounding leaves of a zero weight must not count against a row without a residual.
+        gain[gain < 1e-24 * gain.sum()] = 0.0
+        return gain, claim
+
+
+def _sums(values: Floats) -> Floats:
+    """Sums of the first 0, 1, ..., n - 1 values."""
+    return np.concatenate(([0.0], np.cumsum(values[:-1])))

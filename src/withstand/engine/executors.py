@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import multiprocessing
+import pickle
 from collections.abc import Iterator
 from concurrent.futures import Executor, Future, ProcessPoolExecutor
 from contextlib import contextmanager
@@ -21,13 +22,36 @@ _kernels: dict[str, Kernel] = {}
 """One kernel a process, kept between tasks of the same job."""
 
 
-def run_task(job: Job, token: str, task: int, active: Active) -> Results:
+def parcel(job: Job, executor: Executor) -> Job | bytes:
+    """The job in the form the executor can take.
+
+    Pickled here, once, rather than by the executor for every task: a job that cannot be pickled is then refused at once,
+    where an executor may hang on it.
+
+    Raises
+    ------
+    InputError
+        If the job cannot cross process borders, as with a function defined in a notebook or a lambda.
+    """
+    if isinstance(executor, InProcess):
+        return job
+    try:
+        return pickle.dumps(job)
+    except (pickle.PicklingError, AttributeError, TypeError) as error:
+        raise InputError(
+            f"the procedures or departures cannot be sent to worker processes ({error})",
+            where="workers",
+            remedy="Define your functions in an importable module, or use workers=1.",
+        ) from error
+
+
+def run_task(job: Job | bytes, token: str, task: int, active: Active) -> Results:
     """Run one task in whatever process this is, with linear algebra held to one thread.
 
     Parameters
     ----------
-    job : Job
-        What to do.
+    job : Job or bytes
+        What to do, pickled where it crossed a process border.
     token : str
         Names the job within the run, so that a worker keeps its kernel.
     task : int
@@ -37,10 +61,11 @@ def run_task(job: Job, token: str, task: int, active: Active) -> Results:
     """
     if token not in _kernels:
         _kernels.clear()
-        _kernels[token] = Kernel(job)
-    first = task * job.blocks_per_task
+        _kernels[token] = Kernel(pickle.loads(job) if isinstance(job, bytes) else job)
+    kernel = _kernels[token]
+    first = task * kernel.job.blocks_per_task
     with threadpool_limits(1):
-        return _kernels[token].run(range(first, first + job.blocks_per_task), active)
+        return kernel.run(range(first, first + kernel.job.blocks_per_task), active)
 
 
 class InProcess(Executor):
@@ -99,7 +124,7 @@ def _dask(address: str) -> Iterator[Executor]:
             remedy='Install it with: pip install "withstand[cluster]".',
         ) from error
     try:
-        client = Client(address, timeout="10s")
+        client = Client(address, timeout="10s")  # type: ignore[no-untyped-call]
     except (OSError, ValueError, TimeoutError) as error:
         raise InputError(
             f"no Dask scheduler answers at '{address}' ({error})",
@@ -107,6 +132,6 @@ def _dask(address: str) -> Iterator[Executor]:
             remedy="Start one, or leave --cluster out to use this machine.",
         ) from error
     try:
-        yield client.get_executor(pure=False)
+        yield client.get_executor(pure=False)  # type: ignore[no-untyped-call]
     finally:
-        client.close()
+        client.close()  # type: ignore[no-untyped-call]

@@ -8,7 +8,7 @@ from collections.abc import Callable, Collection, Iterator
 from concurrent.futures import Executor, Future
 
 from withstand.engine.block import BASELINE, CellKey
-from withstand.engine.executors import Results, run_task
+from withstand.engine.executors import Results, parcel, run_task
 from withstand.engine.job import Job
 from withstand.engine.ledger import Entry, Ledger, LedgerKey
 
@@ -37,6 +37,7 @@ class Runner:
         self._executor = executor
         self._window = 1 if workers == 1 else 2 * workers
         self._token = uuid.uuid4().hex
+        self._parcel = parcel(job, executor)
 
     def key(self, cell: CellKey) -> LedgerKey:
         """Where a cell stands in the ledger."""
@@ -88,7 +89,7 @@ class Runner:
                 active: dict[int, list[int]] = {}
                 for world, procedure in sorted(cell for cell, count in done.items() if count <= task):
                     active.setdefault(world, []).append(procedure)
-                waiting.append((task, self._executor.submit(run_task, self.job, self._token, task, active)))
+                waiting.append((task, self._executor.submit(run_task, self._parcel, self._token, task, active)))
                 while len(waiting) >= self._window:
                     number, future = waiting.popleft()
                     yield number, future.result()

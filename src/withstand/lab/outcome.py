@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from types import MappingProxyType
 from typing import Any
 
 import pandas as pd
@@ -55,7 +54,7 @@ class Outcome:
     tipping: pd.DataFrame
     ranking: pd.DataFrame
     headline: tuple[str, ...] = ()
-    facts: Mapping[str, Any] = field(default_factory=lambda: MappingProxyType({}))
+    facts: Mapping[str, Any] = field(default_factory=dict)
     notices: tuple[str, ...] = ()
     refusals: tuple[tuple[str, str, str], ...] = ()
-    provenance: Mapping[str, Any] = field(default_factory=lambda: MappingProxyType({}))
+    provenance: Mapping[str, Any] = field(default_factory=dict)

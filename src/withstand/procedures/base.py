@@ -9,6 +9,7 @@ from __future__ import annotations
 from abc import ABC, abstractmethod
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, fields
+from enum import StrEnum
 from typing import Any, ClassVar, TypeVar
 
 import numpy as np
@@ -25,6 +26,15 @@ Fitter = Callable[[Sample], list[Fit]]
 """Fits one block; the fits are in the order of the focal quantities the fitter was prepared for."""
 
 
+class Answer(StrEnum):
+    """What a procedure can give for a focal quantity."""
+
+    ESTIMATE = "estimate"
+    INTERVAL = "interval"
+    """An interval, or a confidence region for a joint quantity."""
+    TEST = "test"
+
+
 @dataclass(frozen=True)
 class Procedure(ABC):
     """An estimator with its interval and test."""
@@ -38,6 +48,9 @@ class Procedure(ABC):
     """Whether adding X beta to the response adds beta to the estimate and scaling the response scales it, so that one block
     of errors gives coverage, size and power."""
 
+    claims_variance: ClassVar[bool] = True
+    """Whether it claims a variance of its estimate; some intervals come without one."""
+
     @property
     def identity(self) -> str:
         """Name, with every option that is not at its default."""
@@ -47,6 +60,14 @@ class Procedure(ABC):
     def not_applicable(self, design: Design, focus: Focus) -> str | None:
         """Why the procedure has no answer for this focus on this design, 'because' included; None if it has."""
         return None
+
+    def answers(self, focus: Focus) -> frozenset[Answer]:
+        """What the procedure gives for a focal quantity it applies to; measures of anything else are not reported."""
+        if focus.kind is FocusKind.NEW:
+            return frozenset({Answer.ESTIMATE, Answer.INTERVAL})
+        if focus.kind is FocusKind.JOINT:
+            return frozenset({Answer.INTERVAL, Answer.TEST})
+        return frozenset(Answer)
 
     @abstractmethod
     def prepare(self, design: Design, foci: Sequence[Focus], level: float) -> Fitter:

@@ -8,6 +8,7 @@ from __future__ import annotations
 from abc import ABC, abstractmethod
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -77,7 +78,7 @@ class WaldFit(Fit):
         """See Fit."""
         return self.covariance[0, 0] if len(self.estimate) == 1 else None
 
-    @property
+    @cached_property
     def half(self) -> Floats:
         """Half width of the interval, (B,)."""
         return np.asarray(np.sqrt(self.covariance[0, 0]) * self.critical)

@@ -5,7 +5,6 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from functools import cached_property
-from types import MappingProxyType
 
 import numpy as np
 from numpy.typing import NDArray
@@ -66,8 +65,8 @@ class Design:
 
     X: Floats
     names: tuple[str, ...]
-    columns: Mapping[str, Floats] = field(default_factory=lambda: MappingProxyType({}))
-    factors: Mapping[str, Factor] = field(default_factory=lambda: MappingProxyType({}))
+    columns: Mapping[str, Floats] = field(default_factory=dict)
+    factors: Mapping[str, Factor] = field(default_factory=dict)
     fitted: Floats | None = None
     order: Floats | None = None
     groups: Ints | None = None

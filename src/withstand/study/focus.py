@@ -5,7 +5,6 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from enum import StrEnum
-from types import MappingProxyType
 
 import numpy as np
 
@@ -36,8 +35,8 @@ class Point:
         Reference mean at the point, in the unit of the response.
     """
 
-    columns: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
-    levels: Mapping[str, str] = field(default_factory=lambda: MappingProxyType({}))
+    columns: Mapping[str, float] = field(default_factory=dict)
+    levels: Mapping[str, str] = field(default_factory=dict)
     fitted: float = 0.0
 
 

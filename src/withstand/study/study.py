@@ -2,9 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
-from types import MappingProxyType
 from typing import Protocol
 
 import numpy as np
@@ -49,7 +48,7 @@ class Account:
     """
 
     read: int
-    dropped: Mapping[str, int] = field(default_factory=lambda: MappingProxyType({}))
+    dropped: Mapping[str, int] = field(default_factory=dict)
 
     @property
     def used(self) -> int:
@@ -87,6 +86,8 @@ class Study:
         What the user should know about how the table was read.
     digest : str
         Hash of everything above that can change a result.
+    grow : callable, optional
+        Makes the study at another number of rows to collect; a plan has it, data grow by a rule (see `growth`).
     """
 
     name: str
@@ -101,6 +102,7 @@ class Study:
     account: Account | None = None
     notices: tuple[str, ...] = ()
     digest: str = ""
+    grow: Callable[[int], Study] | None = None
 
     @property
     def n(self) -> int:

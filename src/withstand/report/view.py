@@ -1,0 +1,238 @@
+"""A reader's view of an outcome: what was tried, in which order to show it, and one value at a time."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Hashable, Iterable, Mapping
+from dataclasses import dataclass
+from functools import cached_property
+from typing import Any
+
+import pandas as pd
+
+from withstand.departures import REGISTRY
+from withstand.lab.outcome import Outcome
+
+NOTHING = "none"
+"""The departure column of the baseline."""
+
+
+@dataclass(frozen=True)
+class Axis:
+    """A departure tried along its ladder, as the tables name it."""
+
+    departure: str
+    along: str
+    stack: str
+
+
+BASELINE = Axis(NOTHING, "", "")
+
+
+@dataclass(frozen=True)
+class Reading:
+    """One value of the table of measures with its errors."""
+
+    value: float
+    mc_se: float
+    low: float
+    high: float
+    shift: float
+    shift_se: float
+    method: str
+    repetitions: int
+    failures: int
+
+    @property
+    def exact(self) -> bool:
+        """Whether no simulation stands behind it."""
+        return self.method == "exact"
+
+    @property
+    def reach(self) -> float:
+        """Half the width of the Monte Carlo interval, on its longer side; 0 for exact values."""
+        sides = [side for side in (self.value - self.low, self.high - self.value) if math.isfinite(side)]
+        return max(sides, default=0.0) if not self.exact else 0.0
+
+
+@dataclass(frozen=True, eq=False)
+class View:
+    """Looks things up in an outcome.
+
+    Parameters
+    ----------
+    outcome : Outcome
+        What a run found. Where it holds several sample sizes, the view shows that of the study.
+    """
+
+    outcome: Outcome
+
+    @cached_property
+    def n(self) -> int | None:
+        """Rows of the study; None where nothing was measured."""
+        sizes = unique(self.outcome.measures["n"])
+        stated = self.outcome.facts.get("n")
+        if stated is not None and (stated in sizes or not sizes):
+            return int(stated)
+        return int(sizes[0]) if sizes else None
+
+    @property
+    def other_sizes(self) -> list[int]:
+        """Sample sizes in the tables that the view does not show."""
+        return [int(size) for size in unique(self.outcome.measures["n"]) if size != self.n]
+
+    @cached_property
+    def procedures(self) -> list[str]:
+        """In the order they were named; the first is the user's own."""
+        return [str(name) for name in unique(self.outcome.measures["procedure"])]
+
+    @cached_property
+    def foci(self) -> list[str]:
+        """Names of the focal quantities."""
+        named = [str(focus["name"]) for focus in self.outcome.facts.get("focus", [])]
+        return unique([*named, *map(str, self.outcome.measures["focus"])])
+
+    @property
+    def reference(self) -> str:
+        """The procedure that premium and protection are counted against: ols, or the first named."""
+        return "ols" if "ols" in self.procedures else self.procedures[0]
+
+    @property
+    def level(self) -> float:
+        """Confidence level of intervals."""
+        return float(self.outcome.facts.get("level", 0.95))
+
+    @property
+    def bounds(self) -> tuple[float, float] | None:
+        """Accepted coverage, where the run had a tolerance on it."""
+        tolerance = self.outcome.provenance.get("tolerance", {})
+        pair = tolerance.get("coverage_low"), tolerance.get("coverage_high")
+        return None if pair[0] is None or pair[1] is None else (float(pair[0]), float(pair[1]))
+
+    @cached_property
+    def _readings(self) -> dict[tuple[Hashable, ...], Reading]:
+        found = {}
+        for row in self._of_this_size(self.outcome.measures):
+            values = (row.value, row.mc_se, row.low, row.high, row.shift, row.shift_se)
+            reading = Reading(*map(float, values), str(row.method), _count(row.repetitions), _count(row.failures))
+            found[(_axis(row), float(row.severity), row.procedure, row.focus, row.measure)] = reading
+        return found
+
+    @cached_property
+    def _verdicts(self) -> dict[tuple[Hashable, ...], tuple[str, str, float]]:
+        return {
+            (_axis(row), float(row.severity), row.procedure, row.focus): (row.verdict, row.deciding_measure, float(row.value))
+            for row in self._of_this_size(self.outcome.verdicts)
+        }
+
+    @cached_property
+    def ladders(self) -> dict[Axis, list[tuple[float, str]]]:
+        """Severities tried with their labels, least severe first, by axis in the order of the run."""
+        found: dict[Axis, dict[float, str]] = {}
+        for row in self._of_this_size(self.outcome.measures):
+            if row.departure != NOTHING:
+                found.setdefault(_axis(row), {})[float(row.severity)] = str(row.severity_label)
+        return {axis: sorted(rungs.items(), key=lambda rung: abs(rung[0])) for axis, rungs in found.items()}
+
+    def _of_this_size(self, table: pd.DataFrame) -> Iterable[Any]:
+        return table[table["n"] == self.n].itertuples(index=False)
+
+    def reading(self, axis: Axis, severity: float, procedure: str, focus: str, measure: str) -> Reading | None:
+        """One measure; None where it was not reported."""
+        return self._readings.get((axis, severity, procedure, focus, measure))
+
+    def baseline(self, procedure: str, focus: str, measure: str) -> Reading | None:
+        """One measure when nothing is wrong."""
+        return self.reading(BASELINE, 0.0, procedure, focus, measure)
+
+    def verdict(self, axis: Axis, severity: float, procedure: str, focus: str) -> tuple[str, str, float] | None:
+        """Verdict, the measure that decided it and its value; None where there is none."""
+        return self._verdicts.get((axis, severity, procedure, focus))
+
+    def has(self, measure: str, focus: str) -> bool:
+        """Whether any procedure reports the measure for the focal quantity."""
+        return any(self.baseline(procedure, focus, measure) is not None for procedure in self.procedures)
+
+    def has_answer(self, procedure: str, focus: str) -> bool:
+        """Whether the procedure reports coverage or size for the focal quantity."""
+        return any(self.baseline(procedure, focus, measure) is not None for measure in ("coverage", "size"))
+
+    def leading(self, focus: str) -> str:
+        """The first procedure that answers for the focal quantity; empty where there is none."""
+        return next((name for name in self.procedures if self.has_answer(name, focus)), "")
+
+    def ranked(self, focus: str) -> list[Axis]:
+        """Every axis, what to worry about first coming first."""
+        order = [_axis(row) for row in self.outcome.ranking.itertuples() if row.focus == focus]
+        return [axis for axis in unique([*order, *self.ladders]) if axis in self.ladders]
+
+    def rank(self, axis: Axis, procedure: str, focus: str) -> Any | None:
+        """The row of the ranking, as a named tuple; None where there is none."""
+        for row in self.outcome.ranking.itertuples():
+            if (_axis(row), row.procedure, row.focus) == (axis, procedure, focus):
+                return row
+        return None
+
+    def tipping(self, axis: Axis, procedure: str, focus: str) -> Any | None:
+        """The row of tipping severities, as a named tuple; None where there is none.
+
+        A table without a `stack` column speaks of the departure alone wherever that was tried alone.
+        """
+        stacked = "stack" in self.outcome.tipping.columns
+        alone = Axis(axis.departure, axis.along, "")
+        if not stacked and axis != alone and (alone in self.ladders or self._stacks(alone) > 1):
+            return None
+        for row in self.outcome.tipping.itertuples():
+            at = (str(row.departure), _text(row.along), row.procedure, row.focus)
+            if at == (axis.departure, axis.along, procedure, focus) and (not stacked or _text(row.stack) == axis.stack):
+                return row
+        return None
+
+    def _stacks(self, alone: Axis) -> int:
+        return sum((axis.departure, axis.along) == (alone.departure, alone.along) for axis in self.ladders)
+
+    def worst(self, axis: Axis, focus: str) -> float:
+        """The severity to compare procedures at: the worst that the ranking names and the table has, else the last tried."""
+        for row in self.outcome.ranking.itertuples():
+            if (_axis(row), row.focus) == (axis, focus):
+                tried = [severity for severity, _ in self.ladders[axis]]
+                return min(tried, key=lambda severity: abs(severity - row.worst_severity))
+        return self.ladders[axis][-1][0]
+
+    def name(self, axis: Axis) -> str:
+        """An axis as it is shown to people."""
+        if axis == BASELINE:
+            return "nothing wrong"
+        facts: Mapping[str, Any] = self.outcome.facts
+        if axis.departure == "clusters" and facts.get("groups"):
+            told = f"{axis.departure} by {facts['groups']}"
+        elif axis.departure == "serial" and not axis.along and facts.get("order"):
+            told = f"{axis.departure} along {facts['order']}"
+        elif axis.along and " along " not in axis.departure:
+            told = f"{axis.departure} along {axis.along}"
+        else:
+            told = axis.departure
+        return f"{told} with {axis.stack}" if axis.stack else told
+
+    def neutral(self, axis: Axis) -> float:
+        """The severity at which the assumption holds."""
+        known = REGISTRY.get(axis.departure)
+        return 0.0 if known is None else known.neutral
+
+
+def unique(values: Iterable[Any]) -> list[Any]:
+    """Values without repeats, in the order of their first appearance."""
+    return list(dict.fromkeys(values))
+
+
+def _axis(row: Any) -> Axis:
+    return Axis(str(row.departure), _text(row.along), _text(row.stack))
+
+
+def _text(value: object) -> str:
+    """A text cell; a missing one is empty."""
+    return value if isinstance(value, str) else ""
+
+
+def _count(value: float) -> int:
+    return 0 if math.isnan(value) else int(value)

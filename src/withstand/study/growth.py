@@ -1,0 +1,331 @@
+"""How the rows of a study multiply when it is asked about more of them, or fewer: a rule that is always said aloud.
+
+A plan makes its own tables. Data in hand know nothing of the rows that are not there; a rule supplies them.
+"""
+
+from __future__ import annotations
+
+import re
+from abc import ABC, abstractmethod
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+from typing import ClassVar
+
+import numpy as np
+
+from withstand.errors import DesignError, ScenarioError, nearest
+from withstand.study.design import Design, Ints
+from withstand.study.study import FixedRows, Study
+
+COPIES = (
+    "Copies share leverage out: c copies divide every leverage by c and bring no farther point, as real rows would from "
+    "a predictor with long tails; where single far rows matter, compare with 'resample' or with a plan."
+)
+"""What to bear in mind where rows are copied."""
+
+
+@dataclass(frozen=True, eq=False)
+class Growth(ABC):
+    """A rule that gives the study at any number of rows."""
+
+    study: Study
+
+    rule: ClassVar[str]
+
+    @property
+    @abstractmethod
+    def sentence(self) -> str:
+        """What the rule does, for people, with its trap."""
+
+    @property
+    def smallest(self) -> int:
+        """The smallest number of rows: one residual degree of freedom."""
+        return self.study.design.p + 1
+
+    @property
+    def step(self) -> int:
+        """Numbers of rows go up by this."""
+        return 1
+
+    @abstractmethod
+    def at(self, n: int) -> Study:
+        """The study with n rows.
+
+        Raises
+        ------
+        DesignError
+            If n rows cannot carry the model.
+        """
+
+    def _with(self, design: Design, n: int) -> Study:
+        return replace(
+            self.study,
+            design=design,
+            rows=FixedRows(design),
+            response=None,
+            account=None,
+            digest=f"{self.study.digest}|{self.rule}|{n}",
+        )
+
+
+@dataclass(frozen=True, eq=False)
+class Stack(Growth):
+    """Whole copies of the rows, then a balanced remainder."""
+
+    rule = "stack"
+
+    @property
+    def sentence(self) -> str:
+        """See Growth."""
+        unit = "groups" if self.study.design.groups is not None else "rows"
+        return (
+            f"More rows are whole copies of the {self.study.n} there are, then a remainder of {unit} taken evenly over the cells "
+            f"and the range of the fitted mean. {COPIES}"
+        )
+
+    def at(self, n: int) -> Study:
+        """See Growth."""
+        design = self.study.design
+        copies, rest = divmod(n, design.n)
+        index = np.concatenate([np.tile(np.arange(design.n), copies), self._remainder(rest)]).astype(np.int64)
+        grown = design.rows(index)
+        if design.groups is not None:
+            # Copies of a group are new groups, not more rows of the old one.
+            labels = design.groups[index] + design.group_count * (np.arange(n) // design.n)
+            grown = replace(grown, groups=np.unique(labels, return_inverse=True)[1].astype(np.int64))
+        if design.order is not None:
+            if design.groups is None:
+                raise ScenarioError(
+                    "copied rows would stand at the same place in the order",
+                    where="growth",
+                    remedy="A series grows by 'extend', or name groups whose series are copied whole.",
+                )
+            grown = grown.rows(np.argsort(design.order[index], kind="stable").astype(np.int64))
+        return self._with(grown, n)
+
+    def _remainder(self, rest: int) -> Ints:
+        design = self.study.design
+        fitted = design.X @ self.study.coefficients
+        if design.groups is not None:
+            means = np.bincount(design.groups, weights=fitted) / np.bincount(design.groups)
+            whole = _evenly(np.argsort(means, kind="stable"), design.group_count)
+            rows = np.concatenate([np.flatnonzero(design.groups == group) for group in whole])
+            return np.asarray(rows[:rest])
+        cells = [factor.codes for factor in design.factors.values()]
+        ranked = np.lexsort([fitted, *cells])
+        return np.sort(_evenly(ranked, rest))
+
+
+@dataclass(frozen=True, eq=False)
+class DrawnRows:
+    """N rows drawn with replacement from a design, in every block others.
+
+    Parameters
+    ----------
+    design : Design
+        Where they come from.
+    n : int
+        How many.
+    """
+
+    design: Design
+    n: int
+    fixed: bool = False
+
+    def draw(self, generator: np.random.Generator) -> Design:
+        """Rows, or whole groups until there are n rows; draws that cannot carry the model are drawn again."""
+        return full_rank_draw(lambda: self._draw(generator))
+
+    def _draw(self, generator: np.random.Generator) -> Design:
+        groups = self.design.groups
+        if groups is None:
+            return self.design.rows(np.sort(generator.integers(0, self.design.n, self.n)))
+        members = [np.flatnonzero(groups == group) for group in range(self.design.group_count)]
+        index: list[Ints] = []
+        labels: list[Ints] = []
+        while sum(map(len, index)) < self.n:
+            chosen = members[int(generator.integers(0, len(members)))]
+            labels.append(np.full(len(chosen), len(index)))
+            index.append(chosen)
+        drawn = self.design.rows(np.concatenate(index)[: self.n])
+        return replace(drawn, groups=np.concatenate(labels)[: self.n].astype(np.int64))
+
+
+@dataclass(frozen=True, eq=False)
+class Resample(Growth):
+    """Rows drawn with replacement, a fresh set in every block."""
+
+    rule = "resample"
+
+    @property
+    def sentence(self) -> str:
+        """See Growth."""
+        unit = "groups" if self.study.design.groups is not None else "rows"
+        return (
+            f"The rows of each block of replicates are drawn anew, whole {unit} with replacement from the {self.study.n} there are. "
+            "No value is new, so the farthest row stays the farthest however many are drawn."
+        )
+
+    def at(self, n: int) -> Study:
+        """See Growth."""
+        if self.study.design.order is not None:
+            raise ScenarioError(
+                "rows drawn with replacement would stand at the same place in the order",
+                where="growth",
+                remedy="A series grows by 'extend'.",
+            )
+        rows = DrawnRows(self.study.design, n)
+        # The design shown is a balanced one of that length; only the blocks are drawn.
+        shown = Stack(self.study).at(n).design
+        return replace(self._with(shown, n), rows=rows)
+
+
+@dataclass(frozen=True, eq=False)
+class Extend(Growth):
+    """A longer series: the predictors come round again in their order, and the order goes on."""
+
+    rule = "extend"
+
+    @property
+    def sentence(self) -> str:
+        """See Growth."""
+        return (
+            f"A longer series repeats the {self.study.n} rows of predictors from the first on, while the order column goes on with "
+            f"its own spacing; a shorter one is the beginning. {COPIES}"
+        )
+
+    def at(self, n: int) -> Study:
+        """See Growth."""
+        design = self.study.design
+        if design.order is None:
+            raise ScenarioError(
+                "'extend' lengthens a series, and the study names no order column",
+                where="growth",
+                remedy='Name it with order = "...", or use \'stack\'.',
+            )
+        if design.groups is not None:
+            raise ScenarioError(
+                "'extend' lengthens one series, and the rows are in groups", where="growth", remedy="Use 'stack': more groups."
+            )
+        index = np.arange(n) % design.n
+        gaps = np.diff(design.order)
+        turn = float(design.order[-1] - design.order[0] + np.median(gaps))
+        ahead = turn * (np.arange(n) // design.n)
+        grown = design.rows(index)
+        X = grown.X.copy()
+        columns = dict(grown.columns)
+        for name, values in design.columns.items():
+            if not np.array_equal(values, design.order):
+                continue
+            columns[name] = columns[name] + ahead
+            for j, column in enumerate(design.names):
+                if np.array_equal(design.X[:, j], values):
+                    X[:, j] += ahead
+                elif re.search(rf"(?<!\w){re.escape(name)}(?!\w)", column) and n > design.n:
+                    raise ScenarioError(
+                        f"the model column '{column}' is computed from the order column, and the rows to come would need it",
+                        where="growth",
+                        remedy="Use the order column itself in the model, or describe the longer series as a plan.",
+                    )
+        fitted = None if design.fitted is None else X @ self.study.coefficients
+        grown = replace(grown, X=X, columns=columns, order=design.order[index] + ahead, fitted=fitted)
+        return self._with(grown, n)
+
+
+@dataclass(frozen=True, eq=False)
+class Planned(Growth):
+    """A plan's own generator."""
+
+    rule = "plan"
+
+    @property
+    def sentence(self) -> str:
+        """See Growth."""
+        if self.study.rows.fixed:
+            return "The plan lays out its columns anew for every number of rows; they are the same in every replicate."
+        return (
+            "The plan lays out its columns anew for every number of rows, and draws its random columns afresh in each block of "
+            "replicates; tables that cannot carry the model are drawn again."
+        )
+
+    @property
+    def step(self) -> int:
+        """See Growth: whole sets of the cells of a crossing."""
+        return int(getattr(self.study.grow, "step", 1))
+
+    @property
+    def smallest(self) -> int:
+        """See Growth."""
+        return int(getattr(self.study.grow, "smallest", super().smallest))
+
+    def at(self, n: int) -> Study:
+        """See Growth."""
+        if self.study.grow is None:
+            raise ScenarioError("this study is no plan", where="growth", remedy=f"Use one of: {', '.join(RULES)}.")
+        return self.study.grow(n)
+
+
+RULES: dict[str, type[Growth]] = {rule.rule: rule for rule in (Stack, Resample, Extend)}
+"""Rules for data in hand, by name."""
+
+
+def growth_of(study: Study, rule: str | None = None) -> Growth:
+    """The rule by which a study grows.
+
+    Parameters
+    ----------
+    study : Study
+        Data or plan.
+    rule : {"stack", "resample", "extend"}, optional
+        For data. Left out: `extend` for one series in time order, `resample` where the rows are drawn anew in each block,
+        `stack` otherwise.
+
+    Raises
+    ------
+    ScenarioError
+        If the rule is unknown, or given for a plan.
+    """
+    if study.grow is not None:
+        if rule is not None:
+            raise ScenarioError(
+                f"growth '{rule}' is for data, and this study is a plan",
+                where="growth",
+                remedy="Leave it out: a plan lays out as many rows as it is asked for.",
+            )
+        return Planned(study)
+    if rule is None:
+        series = study.design.order is not None and study.design.groups is None
+        rule = Extend.rule if series else Stack.rule if study.rows.fixed else Resample.rule
+    if rule not in RULES:
+        raise ScenarioError(f"unknown growth '{rule}'", where="growth", remedy=nearest(rule, RULES))
+    return RULES[rule](study)
+
+
+ATTEMPTS = 100
+"""Draws of a design before giving up on one that carries the model."""
+
+
+def full_rank_draw(draw: Callable[[], Design]) -> Design:
+    """The first of several draws that carries the model.
+
+    Raises
+    ------
+    ScenarioError
+        If none of ATTEMPTS does.
+    """
+    for _ in range(ATTEMPTS):
+        try:
+            return draw()
+        except DesignError as error:
+            last = error
+    raise ScenarioError(
+        f"in {ATTEMPTS} draws no table carried the model; the last time, {last.what}",
+        where="rows",
+        remedy="Ask for more rows, or drop terms whose levels are rare.",
+    )
+
+
+def _evenly(ranked: Ints, count: int) -> Ints:
+    """`count` members of a ranking, evenly spaced, the middle ones first."""
+    return np.asarray(ranked[np.floor((np.arange(count) + 0.5) * len(ranked) / max(count, 1)).astype(np.int64)])
+
