@@ -30,8 +30,8 @@ def _figure(kind, severity):
 def _rows(n, where, procedure, focus, coverage, base, exact, repetitions, failures, effect):
     def row(measure, value, se, low, high, shift):
         return {
-            "n": n, **where, "procedure": procedure, "focus": focus, "measure": measure, "value": value, "mc_se": se, "low": low,
-            "high": high, "shift": shift, "shift_se": 0.5 * se, "method": "exact" if exact else "simulated",
+            "n": n, **where, "procedure": procedure, "focus": focus, "measure": measure, "value": value, "mc_se": se,
+            "low": low, "high": high, "shift": shift, "shift_se": 0.5 * se, "method": "exact" if exact else "simulated",
             "repetitions": 0 if exact else repetitions, "failures": failures,
         }  # fmt: skip
 
@@ -116,8 +116,8 @@ def build(
                         "detectability_at_tipping": min(0.97, 0.1 + 0.2 * len(worst)) if gives else math.nan,
                     }
                 )  # fmt: skip
-                severity, coverage, verdict = at[-1] if math.isnan(high) else max(
-                    (one for one in at if one[0] <= high), default=at[0]
+                severity, coverage, verdict = (
+                    at[-1] if math.isnan(high) else max((one for one in at if one[0] <= high), default=at[0])
                 )
                 holding = next((name for name in procedures if name in resist), "")
                 worst.append(
@@ -143,11 +143,16 @@ def build(
             "p": 5, "df": 31, "rows_read": 39, "dropped": {"thickness_mm": 2, "charge": 1}, "leverage_max": 0.44,
             "leverage_rows": [3, 17], "order": "run_no", "groups": "charge", "weights": "", "error_sd": 1.234567,
             "r_squared": 0.612, "skewness": 0.71, "kurtosis": 3.4, "vif": {"dry_hours": 1.31, "thickness_mm": math.nan},
-            "coefficients": [{"name": "Intercept", "estimate": 2.5, "se": 0.4}, {"name": "dry_hours", "estimate": 0.043, "se": 0.01}],
+            "coefficients": [
+                {"name": "Intercept", "estimate": 2.5, "se": 0.4}, {"name": "dry_hours", "estimate": 0.043, "se": 0.01},
+            ],
             "rows_mode": "fixed",
             "focus": [
-                {"name": names.get(foci[0], foci[0]), "kind": "coefficient", "estimate": 0.043, "low": 0.022, "high": 0.064, "effect": 0.05},
-                *({"name": names.get(f, f), "kind": "contrast", "estimate": -1.2, "low": -2.0, "high": -0.4, "effect": None} for f in foci[1:]),
+                {
+                    "name": names.get(focus, focus), "kind": "coefficient", "estimate": 0.043, "low": 0.022, "high": 0.064,
+                    "effect": None if i else 0.05,
+                }
+                for i, focus in enumerate(foci)
             ],
         }  # fmt: skip
         provenance |= {
@@ -172,7 +177,7 @@ def build(
     )
 
 
-HOSTILE = '<script>alert("1")</script> & \'q\' $x_1$ | `b` 木の板 ' + "very long " * 12
+HOSTILE = "<script>alert(\"1\")</script> & 'q' $x_1$ | `b` 木の板 " + "very long " * 12
 
 
 @pytest.fixture(scope="session")

@@ -76,12 +76,14 @@ class Plausible:
     def worst_case(self, ladder: Sequence[float], neutral: float) -> tuple[float, ...]:
         """The severities at which harm has to be looked at: the ends, and where an end is open the ladder beyond it.
 
-        Neutral alone where the interval is empty: residuals more regular than chance give no ground to fear the departure.
+        Where the interval is empty, the severity that comes nearest: neutral where the residuals are more regular than chance,
+        the last one told apart, and the ladder beyond, where they are worse than any.
         """
-        if self.empty:
-            return (neutral,)
-        beyond = [s for s in ladder if (self.open_above and s > self.high) or (self.open_below and s < self.low)]
-        return tuple(sorted({self.low, self.high, *beyond}))
+        low, high = (self.point, self.point) if self.empty else (self.low, self.high)
+        above = self.open_above or (self.empty and self.point > neutral)
+        below = self.open_below or (self.empty and self.point < neutral)
+        beyond = [s for s in ladder if (above and s > high) or (below and s < low)]
+        return tuple(sorted({low, high, *beyond}))
 
 
 @dataclass(frozen=True, eq=False)

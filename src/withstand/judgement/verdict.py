@@ -1,7 +1,7 @@
 """Verdicts: whether a procedure keeps within tolerance in a world.
 
 A simulated cell is looked at after doubling numbers of replicates. Look j spends delta * 6 / (pi^2 j^2) of the accepted chance
-of a wrong verdict, shared equally among the measures judged; the sum over all looks is at most delta. A proportion of
+of a wrong verdict, shared among the measures judged; the sum over all looks is at most delta. A proportion of
 independent replicates has the Clopper-Pearson interval, everything else a normal interval, or Student's t over blocks where
 every block has a design of its own. An exact cell is settled at once.
 """
@@ -9,7 +9,7 @@ every block has a design of its own. An exact cell is settled at once.
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass
 from enum import StrEnum
 
@@ -19,6 +19,9 @@ from withstand.engine.tally import Tally
 from withstand.judgement.aspects import judged
 from withstand.judgement.findings import Aspect, Finding, Kind
 from withstand.measures.compute import COUNTED, Estimate, clopper_pearson, measure
+
+_SMALL_SHARE = 0.1
+"""Share of the spending that goes to bias, which is known to a hundredth of an SD when shares are still open."""
 
 
 class Verdict(StrEnum):
@@ -109,12 +112,20 @@ def judge(tally: Tally, aspects: Mapping[str, Aspect], delta: float, look: int, 
         Error SD in the unit of the response, for an absolute tolerance on bias.
     """
     names = judged(aspects, tally)
-    level = 1.0 - spending(delta, look) / len(names)
+    spent = spending(delta, look)
     findings = []
     for name, estimate in measure(tally, names, unit).items():
-        low, high = _interval(name, estimate, tally, level)
+        low, high = _interval(name, estimate, tally, 1.0 - spent * _share(name, names))
         findings.append(Finding.of(aspects[name], estimate.value, low, high))
     return Judgement(_combine(tuple(findings)), tuple(findings), exact=False, replicates=tally.replicates)
+
+
+def _share(name: str, names: Collection[str]) -> float:
+    """The share of the spending that goes to one measure; all shares add up to 1."""
+    shares = sum(other in COUNTED for other in names)
+    if shares == 0 or shares == len(names):
+        return 1.0 / len(names)
+    return (1.0 - _SMALL_SHARE) / shares if name in COUNTED else _SMALL_SHARE / (len(names) - shares)
 
 
 def _interval(name: str, estimate: Estimate, tally: Tally, level: float) -> tuple[float, float]:

@@ -8,14 +8,18 @@ from contextlib import closing, contextmanager
 from dataclasses import dataclass, field
 from pathlib import Path
 
+from withstand.engine.block import CellKey
 from withstand.engine.executors import open_executor
 from withstand.engine.job import TASK_REPLICATES, tasks_for
 from withstand.engine.ledger import Ledger
 from withstand.engine.runner import Runner
 from withstand.engine.tally import Tally
+from withstand.judgement.sequential import Standing, next_step
+from withstand.judgement.verdict import Judgement
 from withstand.lab.exactly import complete, exact_answers
 from withstand.lab.frames import CellAnswers
 from withstand.lab.grid import Cell, Grid
+from withstand.lab.judging import verdict_of
 from withstand.lab.progress import Progress, Silent
 from withstand.lab.simulate import simulated_answers, tallies_of
 
@@ -72,14 +76,9 @@ class Evidence:
         names = list(exact) + [name for name in simulated if name not in exact]
         return {name: exact.get(name) or simulated[name] for name in names}
 
-
-Unsettled = Callable[[Evidence], Sequence[Cell]]
-"""Which cells need more replicates, judged at the current look."""
-
-
-def nothing_more(evidence: Evidence) -> Sequence[Cell]:
-    """A rule that is content with the first look."""
-    return ()
+    def verdict(self, cell: Cell) -> Judgement | None:
+        """The verdict of a cell; None without evidence."""
+        return verdict_of(self.grid, cell, self.exact.get(cell), self.tallies.get(cell))
 
 
 @dataclass(frozen=True, eq=False)
@@ -109,7 +108,17 @@ def open_bench(grid: Grid, effort: Effort) -> Iterator[Bench]:
         yield Bench(effort, ledger, executor)
 
 
-def gather(grid: Grid, bench: Bench, unsettled: Unsettled = nothing_more) -> Evidence:
+Settled = Callable[[Evidence, Sequence[Cell]], bool]
+"""Whether cells that share a world and a procedure need no more replicates; asked at each look with the evidence so far."""
+
+
+def verdicts_settled(evidence: Evidence, cells: Sequence[Cell]) -> bool:
+    """Whether every verdict is settled."""
+    verdicts = [evidence.verdict(cell) for cell in cells]
+    return all(verdict is not None and verdict.settled for verdict in verdicts)
+
+
+def gather(grid: Grid, bench: Bench, settled: Settled = verdicts_settled) -> Evidence:
     """Bring every cell of a grid to an answer.
 
     Parameters
@@ -118,33 +127,47 @@ def gather(grid: Grid, bench: Bench, unsettled: Unsettled = nothing_more) -> Evi
         The plan on its study.
     bench : Bench
         Where to compute.
-    unsettled : callable
-        Asked after each look which cells are still open; those get twice the replicates, up to the plan's cap.
+    settled : callable
+        When to stop; cells that are not settled get twice the replicates, up to the plan's cap.
 
     Returns
     -------
     Evidence
         Deterministic: it depends on study, plan and seed, not on workers or on earlier interruptions.
     """
-    plan, effort = grid.plan, bench.effort
     cells = tuple(grid.cells)
-    exact = exact_answers(grid, cells) if plan.method == "auto" else {}
+    exact = exact_answers(grid, cells) if grid.plan.method == "auto" else {}
     known = {(cell.procedure_index, cell.focus_index): exact[cell] for cell in exact if cell.spot.axis is None}
-    simulate = [cell for cell in cells if effort.verify or cell not in exact or not complete(cell, exact[cell])]
     runner = bench.runner(grid)
-    tasks, cap = tasks_for(plan.repetitions), plan.most // TASK_REPLICATES
-    still_open: Sequence[Cell] = simulate
-    while True:
-        if effort.simulate and still_open:
-            keys = sorted({(cell.spot.world, cell.procedure_index) for cell in still_open})
-            effort.progress.phase(f"{len(keys)} cells to {tasks * TASK_REPLICATES} replicates", runner.outstanding(keys, tasks))
-            runner.advance(keys, tasks, effort.progress.step)
-        tallies = tallies_of(runner, simulate)
-        simulated = simulated_answers(tallies, known, grid.study.error_sd)
-        evidence = Evidence(grid, cells, exact, simulated, tallies)
-        if not effort.simulate or tasks >= cap:
-            return evidence
-        still_open = unsettled(evidence)
-        if not still_open:
-            return evidence
-        tasks = min(2 * tasks, cap)
+
+    def so_far(some: Sequence[Cell]) -> Evidence:
+        tallies = tallies_of(runner, some)
+        return Evidence(grid, cells, exact, simulated_answers(tallies, known, grid.study.error_sd), tallies)
+
+    simulate = [cell for cell in cells if bench.effort.verify or cell not in exact or not complete(cell, exact[cell])]
+    if bench.effort.simulate:
+        _search(grid, runner, simulate, lambda some: settled(so_far(some), some), bench.effort.progress)
+    return so_far(simulate)
+
+
+def _search(
+    grid: Grid, runner: Runner, cells: Sequence[Cell], settled: Callable[[Sequence[Cell]], bool], progress: Progress
+) -> None:
+    """Give cells replicates until they are settled or the cap is reached."""
+    by_key: dict[CellKey, list[Cell]] = {}
+    for cell in cells:
+        by_key.setdefault((cell.spot.world, cell.procedure_index), []).append(cell)
+
+    def standing(key: CellKey) -> Standing:
+        replicates = runner.read(key).tasks * TASK_REPLICATES
+        look = grid.looks.reached(replicates)
+        # Between looks, as after an interruption, nothing is judged: the run goes on to the next look as it would have.
+        at_look = look > 0 and grid.looks.target(look) == replicates
+        return Standing(replicates, at_look and settled(by_key[key]))
+
+    standings = {key: standing(key) for key in by_key}
+    while (step := next_step(standings, grid.looks)) is not None:
+        tasks = tasks_for(step.replicates)
+        progress.phase(f"{len(step.cells)} cells to {step.replicates:,} replicates", runner.outstanding(step.cells, tasks))
+        runner.advance(step.cells, tasks, progress.step)
+        standings |= {key: standing(key) for key in step.cells}

@@ -8,7 +8,10 @@ from functools import cached_property
 
 from withstand.departures.world import World
 from withstand.engine.block import BASELINE
-from withstand.engine.job import Job
+from withstand.engine.job import TASK_REPLICATES, Job, tasks_for
+from withstand.judgement.aspects import aspects_of
+from withstand.judgement.findings import Aspect
+from withstand.judgement.sequential import Looks
 from withstand.lab.plan import Axis, Plan
 from withstand.procedures.base import Procedure
 from withstand.study.focus import Focus
@@ -86,6 +89,17 @@ class Grid:
         """The engine's view of the grid."""
         worlds = tuple(spot.axis.world(spot.severity) for spot in self.spots if spot.axis is not None)
         return Job(self.study, worlds, self.plan.procedures, self.plan.seed)
+
+    @cached_property
+    def looks(self) -> Looks:
+        """When verdicts are looked at; whole tasks, so that a look is a stored state."""
+        first = tasks_for(self.plan.repetitions) * TASK_REPLICATES
+        return Looks(first, max(first, tasks_for(self.plan.most) * TASK_REPLICATES))
+
+    @cached_property
+    def aspects(self) -> dict[str, Aspect]:
+        """The measures the plan's tolerance speaks about."""
+        return aspects_of(self.plan.tolerance, self.study.alpha)
 
     def world(self, spot: Spot) -> World:
         """The world at a spot."""

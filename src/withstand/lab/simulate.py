@@ -56,9 +56,7 @@ def simulated_answers(
         known = known_baseline.get((cell.procedure_index, cell.focus_index), {})
         computed = measure(tally, applicable_measures(cell.procedure, cell.focus), error_sd)
         answers[cell] = {
-            name: Answer(
-                _sharpened(name, estimate, known, cell.spot.axis is None), "simulated", tally.replicates, failures
-            )
+            name: Answer(_sharpened(name, estimate, known, cell.spot.axis is None), "simulated", tally.replicates, failures)
             for name, estimate in computed.items()
         }
     return answers

@@ -2,12 +2,15 @@
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Mapping, Sequence
 from concurrent.futures import Executor
 from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
+from scipy import stats
+from scipy import stats
 
 from withstand.engine.job import Job, block_width
 from withstand.engine.ledger import Ledger
@@ -25,7 +28,6 @@ from withstand.lab.size_plan import Condition, Effort
 from withstand.measures.compute import Estimate
 from withstand.procedures.base import Procedure
 from withstand.study.study import FixedRows, Study
-from scipy import stats
 
 TABLES = (24, 48, 96, 192, 384)
 """Tables drawn at each look where an answer is exact given the table."""
@@ -100,7 +102,7 @@ class Look:
     def answers(self, study: Study, seed: int) -> dict[int, CellAnswers]:
         """Answers by number of the condition, with as many replicates as it takes to tell, up to the cap."""
         grid = self.grid(study, seed)
-        cells = self._cells(grid)
+        cells = self._cells()
         found: dict[int, CellAnswers] = {}
         if not study.rows.fixed and self.effort.method == "auto":
             found = self._averaged(grid, cells)
@@ -109,10 +111,10 @@ class Look:
         means = Means(workers=self.effort.workers, progress=self.progress)
         ledger = Ledger(None)
         try:
-            evidence = gather(grid, Bench(means, ledger, self.executor), lambda now: self._open(now, cells, found))
+            evidence = gather(grid, Bench(means, ledger, self.executor), lambda now, some: self._settled(now, some, cells, found))
         finally:
             ledger.close()
-        return {i: evidence.answers(cell) | found.get(i, {}) for i, cell in cells.items()}
+        return {i: evidence.answers(evidence.cells[place]) | found.get(i, {}) for i, place in cells.items()}
 
     def readings(self, study: Study, seed: int) -> tuple[dict[str, Reading], dict[int, CellAnswers]]:
         """The requirements' measures by key, and everything that was found."""
@@ -123,11 +125,10 @@ class Look:
             read[requirement.key] = reading(answers[int(condition)], name)
         return read, answers
 
-    def _cells(self, grid: Grid) -> dict[int, Cell]:
-        """The cell of each condition."""
-        cells = list(grid.cells)
-        spots = iter([cell for cell in cells if cell.spot.axis is not None])
-        return {i: cells[0] if c.world.baseline else next(spots) for i, c in enumerate(self.conditions)}
+    def _cells(self) -> dict[int, int]:
+        """The place of each condition's cell among the cells of a grid, which begin with the baseline."""
+        places = itertools.count(1)
+        return {i: 0 if c.world.baseline else next(places) for i, c in enumerate(self.conditions)}
 
     def _answered(self, condition: int, answers: CellAnswers) -> bool:
         return all(_measured(name) in answers for i, name in self._asked() if i == condition)
@@ -136,24 +137,26 @@ class Look:
         parts = [requirement.key.partition("|") for requirement in self.requirements]
         return [(int(condition), name) for condition, _, name in parts]
 
-    def _open(self, evidence: Evidence, cells: Mapping[int, Cell], known: Mapping[int, CellAnswers]) -> list[Cell]:
-        """Cells whose margins cannot be told from zero yet; the looks share the accepted chance of error."""
-        still = {}
-        for requirement in self.requirements:
-            condition, _, name = requirement.key.partition("|")
-            cell = cells[int(condition)]
-            answers = evidence.answers(cell) | known.get(int(condition), {})
-            repetitions = max((answer.repetitions for answer in answers.values()), default=self.effort.repetitions)
+    def _settled(
+        self, evidence: Evidence, some: Sequence[Cell], cells: Mapping[int, int], known: Mapping[int, CellAnswers]
+    ) -> bool:
+        """Whether the margins of these cells can be told from zero; the looks share the accepted chance of error."""
+        for requirement, (condition, name) in zip(self.requirements, self._asked(), strict=True):
+            cell = evidence.cells[cells[condition]]
+            if cell not in some:
+                continue
+            answers = evidence.answers(cell) | known.get(condition, {})
+            repetitions = max(answer.repetitions for answer in answers.values())
             look = 1 + max(0, round(np.log2(max(repetitions, 1) / self.effort.repetitions)))
             if not self._clear(requirement, reading(answers, name), look):
-                still[id(cell)] = cell
-        return list(still.values())
+                return False
+        return True
 
     def _clear(self, requirement: Requirement, seen: Reading, look: int) -> bool:
         chance = spending(self.effort.delta, look) / len(self.requirements)
         return abs(requirement.margin(seen.value)) > float(stats.norm.isf(chance / 2.0)) * seen.se
 
-    def _averaged(self, grid: Grid, cells: Mapping[int, Cell]) -> dict[int, CellAnswers]:
+    def _averaged(self, grid: Grid, cells: Mapping[int, int]) -> dict[int, CellAnswers]:
         """Exact answers given the table, averaged over drawn tables: their spread is the only error left."""
         study = grid.study
         values: dict[int, dict[str, list[float]]] = {i: {} for i in cells}
@@ -163,10 +166,10 @@ class Look:
             for table in range(done, count):
                 design = study.rows.draw(design_generator(grid.plan.seed, table))
                 here = TableGrid(replace(study, design=design, rows=FixedRows(design)), grid.plan)
-                placed = self._cells(here) if (0, 0) not in here.job.refusals else {}
-                answers = exact_answers(here, [*dict.fromkeys([next(iter(here.cells)), *placed.values()])]) if placed else {}
+                placed = tuple(here.cells)  # none where the procedure does not apply to this table
+                answers = exact_answers(here, placed)
                 for i in cells:
-                    given = answers.get(placed[i], {}) if placed else _REFUSED
+                    given = answers.get(placed[cells[i]], {}) if placed else _REFUSED
                     for name, answer in given.items():
                         values[i].setdefault(name, []).append(answer.estimate.value)
             done = count

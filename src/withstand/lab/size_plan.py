@@ -50,8 +50,10 @@ class Targets:
 
     def __post_init__(self) -> None:
         if self.power is not None and not 0.0 < self.power < 1.0:
-            remedy = "Give a share, such as 0.9." if self.power <= 0.0 or self.power > 100.0 else (
-                f"Give a share below 1, such as {0.9 if self.power == 1.0 else self.power / 100.0 or 0.9:g}."
+            remedy = (
+                "Give a share, such as 0.9."
+                if self.power <= 0.0 or self.power > 100.0
+                else (f"Give a share below 1, such as {0.9 if self.power == 1.0 else self.power / 100.0 or 0.9:g}.")
             )
             raise ScenarioError(f"the target power is {self.power:g}", where="--power", remedy=remedy)
         if self.half_width is not None and not 0.0 < self.half_width < math.inf:
@@ -180,7 +182,9 @@ def requirements_of(
     found: list[Requirement] = []
     for i, condition in enumerate(conditions):
         told = f" under {condition.name}" if not condition.world.baseline else " when nothing is wrong"
-        found += [replace(r, key=f"{i}|{r.measure}", words=r.words + told) for r in _of(targets, tolerance, study, procedure, focus)]
+        found += [
+            replace(r, key=f"{i}|{r.measure}", words=r.words + told) for r in _of(targets, tolerance, study, procedure, focus)
+        ]
     return tuple(found)
 
 
@@ -200,14 +204,20 @@ def _of(targets: Targets, tolerance: Tolerance, study: Study, procedure: Procedu
         }
         for aspect in aspects.values():
             if speaks[aspect.measure]:
-                yield Requirement("", aspect.measure, aspect.low, aspect.high, _in_words(aspect.measure, aspect.low, aspect.high))
+                yield Requirement(
+                    "", aspect.measure, aspect.low, aspect.high, _in_words(aspect.measure, aspect.low, aspect.high)
+                )
     if targets.power is not None:
         if Answer.TEST not in answers:
             raise ScenarioError(
-                f"'{procedure.identity}' has no test of '{focus.name}', so there is no power", where="--power", remedy="Leave it out."
+                f"'{procedure.identity}' has no test of '{focus.name}', so there is no power",
+                where="--power",
+                remedy="Leave it out.",
             )
         if focus.effect is None:
-            raise ScenarioError(f"power for '{focus.name}' is asked for without an effect", where="study.effect", remedy=NO_EFFECT)
+            raise ScenarioError(
+                f"power for '{focus.name}' is asked for without an effect", where="study.effect", remedy=NO_EFFECT
+            )
         yield Requirement("", "power", low=targets.power, words=f"power at least {targets.power:g}")
     if targets.half_width is not None:
         if Answer.INTERVAL not in answers or not focus.scalar:
@@ -218,7 +228,9 @@ def _of(targets: Targets, tolerance: Tolerance, study: Study, procedure: Procedu
 
 
 def _in_words(measure: str, low: float, high: float) -> str:
-    said = {"miss_below": "share missing below", "miss_above": "share missing above", "bias_in_sd": "bias in SDs"}.get(measure, measure)
+    said = {"miss_below": "share missing below", "miss_above": "share missing above", "bias_in_sd": "bias in SDs"}.get(
+        measure, measure
+    )
     if math.isfinite(low) and math.isfinite(high):
         return f"{said} between {low:g} and {high:g}"
     return f"{said} at least {low:g}" if math.isfinite(low) else f"{said} at most {high:g}"

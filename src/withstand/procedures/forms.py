@@ -8,11 +8,13 @@ from __future__ import annotations
 
 from abc import ABC, abstractmethod
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
+from scipy import sparse
 
 from withstand.procedures.sample import Sample
-from withstand.study.design import Floats
+from withstand.study.design import Floats, Ints
 
 
 @dataclass(frozen=True, eq=False)
@@ -138,3 +140,44 @@ class Squares(ResidualForm):
         """See ResidualForm."""
         rows = self.rows[0]
         return np.asarray(self.scale * (rows.T @ (rows @ M)))
+
+
+@dataclass(frozen=True, eq=False)
+class Grouped(ResidualForm):
+    """V_ij = scale * sum_g (sum_{t in g} b_i,t e_t)(sum_{t in g} b_j,t e_t): Squares whose rows live within clusters.
+
+    Parameters
+    ----------
+    rows : ndarray of shape (k, n)
+        b.
+    codes : ndarray of shape (n,)
+        Clusters 0..G-1.
+    scale : float
+        Small-sample factor.
+    """
+
+    rows: Floats
+    codes: Ints
+    scale: float
+
+    @property
+    def k(self) -> int:
+        """See ResidualForm."""
+        return self.rows.shape[0]
+
+    @cached_property
+    def sums(self) -> list[sparse.csr_array]:
+        """One sparse matrix (G, n) a focal row, which sums scores within clusters."""
+        n = self.rows.shape[1]
+        index = np.arange(n)
+        return [sparse.csr_array((row, (self.codes, index)), shape=(int(self.codes.max()) + 1, n)) for row in self.rows]
+
+    def evaluate(self, sample: Sample) -> Floats:
+        """See ResidualForm."""
+        parts = np.stack([np.asarray(matrix @ sample.residuals) for matrix in self.sums])
+        return np.asarray(self.scale * np.einsum("igb,jgb->ijb", parts, parts))
+
+    def times(self, M: Floats) -> Floats:
+        """See ResidualForm."""
+        matrix = self.sums[0]
+        return np.asarray(self.scale * (matrix.T @ (matrix @ M)))

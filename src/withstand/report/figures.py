@@ -86,7 +86,8 @@ def as_svg(drawn: Figure) -> bytes:
     """The figure as SVG, the same bytes whenever and wherever it is written."""
     out = io.BytesIO()
     with own_style():
-        FigureCanvasSVG(drawn).print_svg(out, metadata={"Date": None, "Creator": None, "Format": None, "Type": None})
+        FigureCanvasSVG(drawn)
+        drawn.savefig(out, format="svg", metadata={"Date": None, "Creator": None, "Format": None, "Type": None})
     return out.getvalue()
 
 
@@ -94,6 +95,6 @@ def as_png(drawn: Figure) -> bytes:
     """The figure as PNG with DOTS an inch."""
     out = io.BytesIO()
     with own_style():
-        drawn.set_dpi(DOTS)
-        FigureCanvasAgg(drawn).print_png(out, metadata={"Software": None})
+        FigureCanvasAgg(drawn)
+        drawn.savefig(out, format="png", dpi=DOTS, metadata={"Software": None})
     return out.getvalue()

@@ -26,6 +26,9 @@ from withstand.report.tables import (
 from withstand.report.view import View
 from withstand.report.words import count, listing, number, plural
 
+SAME = 1e-9
+"""Shares closer than this are one."""
+
 Pictures = Mapping[tuple[str, str], bytes]
 """SVG by focus and name of the figure."""
 
@@ -74,7 +77,11 @@ def page(outcome: Outcome, pictures: Pictures | None = None) -> str:
 
 def _environment() -> Environment:
     return Environment(
-        loader=PackageLoader("withstand.report"), autoescape=True, undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True
+        loader=PackageLoader("withstand.report"),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
     )
 
 
@@ -94,7 +101,7 @@ def _focus(view: View, focus: str, place: int, drawn: Pictures) -> dict[str, Any
             "svg": inline_svg(drawn[focus, name], f"f{place}{name}", describe(view, name, focus)),
         }
         for name in FIGURES
-        if (focus, name) in drawn
+        if (focus, name) in drawn and not (name == "size" and _mirrors(view, focus))
     ]
     return {
         "name": focus,
@@ -107,6 +114,18 @@ def _focus(view: View, focus: str, place: int, drawn: Pictures) -> dict[str, Any
         "verdicts": [verdict_table(view, focus), turning_table(view, focus)] if lead and view.ladders else [],
         "procedures": _procedure_tables(view, focus) if lead else [],
     }
+
+
+def _mirrors(view: View, focus: str) -> bool:
+    """Whether size is 1 - coverage throughout, so that a second figure would show the same."""
+    for axis, ladder in view.ladders.items():
+        for severity, _ in ladder:
+            for procedure in view.procedures:
+                size = view.reading(axis, severity, procedure, focus, "size")
+                coverage = view.reading(axis, severity, procedure, focus, "coverage")
+                if size is not None and (coverage is None or abs(size.value + coverage.value - 1.0) > SAME):
+                    return False
+    return True
 
 
 def _procedure_tables(view: View, focus: str) -> list[Table]:
@@ -148,7 +167,8 @@ def fact_tables(view: View) -> list[Table]:
     tables = []
     if facts.get("coefficients"):
         rows = tuple(
-            (Cell(str(one["name"])), Cell(number(one["estimate"], 4)), Cell(number(one["se"], 4))) for one in facts["coefficients"]
+            (Cell(str(one["name"])), Cell(number(one["estimate"], 4)), Cell(number(one["se"], 4)))
+            for one in facts["coefficients"]
         )
         tables.append(Table("Coefficients of the reference fit", ("Term", "estimate", "standard error"), rows))
     if facts.get("vif"):

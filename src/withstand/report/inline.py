@@ -32,7 +32,7 @@ def inline_svg(svg: bytes, prefix: str, description: str) -> Markup:
     text = _PREFIXED.sub(lambda found: f"{found[1]}{prefix}-", text)
     said = escape(description)
     head = f'<svg role="img" aria-label="{said}" stroke-linejoin="round" stroke-linecap="butt" '
-    return Markup(text.replace("<svg ", head, 1))  # noqa: S704 - escaped above and by the writer of the SVG
+    return Markup(text.replace("<svg ", head, 1))  # escaped above and by the writer of the SVG
 
 
 def describe(view: View, name: str, focus: str) -> str:
@@ -41,18 +41,18 @@ def describe(view: View, name: str, focus: str) -> str:
     departures = [view.name(axis) for axis in view.ranked(focus)]
     if name == "premium":
         return (
-            f"For each of {listing(view.procedures)}: the width of the interval for {focus} when nothing is wrong, and its coverage "
-            f"under {listing(departures)}. The tables on premium and protection hold the numbers."
+            f"For each of {listing(view.procedures)}: the width of the interval for {focus} when nothing is wrong, and its "
+            f"coverage under {listing(departures)}. The tables on premium and protection hold the numbers."
         )
     if name == "harm":
         return (
-            f"Coverage of {focus} lost under each departure by {first}, against the chance of noticing it. The table on what to worry "
-            "about first holds the numbers."
+            f"Coverage of {focus} lost under each departure by {first}, against the chance of noticing it. The table on "
+            "what to worry about first holds the numbers."
         )
     worst = _extreme(view, first, focus, name)
     return (
-        f"{name.capitalize()} of {focus} against severity for {listing(view.procedures)}, one panel each for {listing(departures)}. "
-        f"{worst} The verdict table holds the numbers."
+        f"{name.capitalize()} of {focus} against severity for {listing(view.procedures)}, one panel each for "
+        f"{listing(departures)}. {worst} The verdict table holds the numbers."
     )
 
 

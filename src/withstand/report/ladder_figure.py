@@ -137,7 +137,9 @@ def _mark_allowed(panel: Axes, view: View, axis: Axis, focus: str) -> None:
     if row is None or not (math.isfinite(row.plausible_low) and math.isfinite(row.plausible_high)):
         return
     severities = [view.neutral(axis), *(severity for severity, _ in view.ladders[axis])]
-    low, high = (float(place) for place in np.interp([row.plausible_low, row.plausible_high], severities, range(len(severities))))
+    low, high = (
+        float(place) for place in np.interp([row.plausible_low, row.plausible_high], severities, range(len(severities)))
+    )
     panel.plot(
         [low, high], [0.035, 0.035], transform=panel.get_xaxis_transform(), color=style.ALLOWED, linewidth=3.0,
         solid_capstyle="butt" if high > low else "round", zorder=4,

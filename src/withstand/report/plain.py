@@ -20,7 +20,7 @@ def plain(value: Any) -> Any:
     TypeError
         If there is something else in it.
     """
-    if value is None or isinstance(value, (str, bool, int, float)) and type(value).__module__ == "builtins":
+    if value is None or type(value) in (str, bool, int, float):
         return value
     if isinstance(value, np.generic):
         return plain(value.item())

@@ -126,4 +126,6 @@ def _add_legend(figure: Figure, view: View, power: bool) -> None:
         keys.append(Line2D([], [], color=colour[2], linestyle="none", marker="s", markerfacecolor="white", label="size"))
     if view.bounds is not None:
         keys.append(Patch(facecolor=style.ZONE, edgecolor="#7f9a86", linewidth=0.5, label="tolerance"))
-    figure.legend(handles=keys, loc="upper left", bbox_to_anchor=(0.0, 1.0), ncols=len(keys), columnspacing=1.2, handlelength=1.2)
+    figure.legend(
+        handles=keys, loc="upper left", bbox_to_anchor=(0.0, 1.0), ncols=len(keys), columnspacing=1.2, handlelength=1.2
+    )

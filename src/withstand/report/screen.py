@@ -57,7 +57,9 @@ def _focus_block(view: View, focus: str) -> list[str]:
     lead = view.leading(focus)
     if not lead:
         return _wrapped(f"{focus}: no procedure applies; the page says why.")
-    title = f"{textwrap.shorten(_one_line(focus), WIDTH // 2, placeholder=' …')}, {percent(view.level, decimals=0)} % interval by {lead}. {baseline_sentence(view, lead, focus)}"
+    name = textwrap.shorten(_one_line(focus), WIDTH // 2, placeholder=" …")
+    level = percent(view.level, decimals=0)
+    title = f"{name}, {level} % interval by {_one_line(lead)}. {baseline_sentence(view, lead, focus)}"
     told = worries(view, lead, focus)
     lines = _wrapped(title)
     if not told:

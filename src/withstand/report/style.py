@@ -1,4 +1,4 @@
-"""How the figures look: colours that differ in lightness too, a marker for every colour, and no trace of the user's settings."""
+"""How the figures look: colours that differ in lightness too, a marker for every colour, no trace of the user's settings."""
 
 from __future__ import annotations
 

@@ -58,18 +58,20 @@ class Table:
 
 def worry_table(view: View, procedure: str, focus: str) -> Table:
     """What to worry about first, one row a departure."""
-    columns = ("If this is wrong", "the interval", "your data allow", "it then covers", "more rows", "instead")
-    columns = (*columns, "a residual check notices it")
+    columns = (
+        "If this is wrong", "the interval", "your data allow", "it then covers", "more rows", "instead",
+        "a residual check notices it",
+    )  # fmt: skip
     rows = []
     for worry in worries(view, procedure, focus):
         told = (worry.turns, worry.allowed, worry.covers, worry.rows, worry.instead, worry.noticed)
         cells = [Cell(text or NO_VALUE) for text in told]
-        cells[0] = Cell(_signed(worry.verdict, worry.turns), worry.verdict)
+        cells[2] = Cell(_signed(worry.verdict, worry.covers), worry.verdict, f"{worry.verdict}, " if worry.verdict else "")
         rows.append((Cell(worry.name), *cells))
     note = (
-        "Coverage is that at the worst severity your data allow, or the last one tried where the data do not say; the sign is the "
-        "verdict there. The last column is the chance that the usual 5 % check of the residuals notices the departure where the "
-        "interval starts to give."
+        "Coverage is that at the worst severity your data allow, or the last one tried where the data do not say; the "
+        "sign is the verdict there. The last column is the chance that the usual 5 % check of the residuals notices the "
+        "departure where the interval starts to give."
     )
     return Table(f"What to worry about first: {focus} by {procedure}", columns, tuple(rows), note=note)
 
@@ -83,9 +85,9 @@ def verdict_table(view: View, focus: str) -> Table:
             cells = [_verdict_cell(view, axis, severity, procedure, focus) for procedure in view.procedures]
             rows.append((Cell(view.name(axis)), Cell(label), *cells))
     note = (
-        f"{SIGNS['holds']} holds, {SIGNS['gives']} gives, {SIGNS['unsettled']} unsettled. Numbers are coverage in percent (size where "
-        "there is no interval); without ± they are exact, ± is the half-width of the 95 % Monte Carlo interval. ↑ covers more than "
-        "asked: wider than needed. Another measure is named where it decided."
+        f"{SIGNS['holds']} holds, {SIGNS['gives']} gives, {SIGNS['unsettled']} unsettled. Numbers are coverage in percent "
+        "(size where there is no interval); without ± they are exact, ± is the half-width of the 95 % Monte Carlo "
+        "interval. ↑ covers more than asked: wider than needed. Another measure is named where it decided."
     )
     return Table(f"Verdicts: {focus}", ("Departure", "severity", *view.procedures), tuple(rows), heads=2, note=note)
 
@@ -108,8 +110,8 @@ def premium_table(view: View, focus: str) -> Table:
     """What each procedure costs when nothing is wrong: one row a procedure."""
     power = view.has("power", focus)
     detectable = view.has("detectable_effect", focus)
-    columns = ("Procedure", "covers", "size", "width ratio")
-    columns += (("power",) if power else ()) + (("detectable effect",) if detectable else ()) + ("most failures",)
+    columns = ["Procedure", "covers", "size", "width ratio"]
+    columns += [*(["power"] if power else []), *(["detectable effect"] if detectable else []), "most failures"]
     rows = []
     for procedure in view.procedures:
         ratio = width_ratio(view, procedure, focus)
@@ -124,11 +126,11 @@ def premium_table(view: View, focus: str) -> Table:
         cells.append(_most_failures(view, procedure, focus))
         rows.append((Cell(procedure), *cells))
     note = (
-        f"Width ratio is the mean width of the interval over that of {view.reference}. Read power beside size: a test that rejects "
-        "too often when there is nothing has its power for free. Most failures is the largest share of replicates without an "
-        "answer in any world; a failure counts as neither covering nor rejecting."
+        f"Width ratio is the mean width of the interval over that of {view.reference}. Read power beside size: a test that "
+        "rejects too often when there is nothing has its power for free. Most failures is the largest share of replicates "
+        "without an answer in any world; a failure counts as neither covering nor rejecting."
     )
-    return Table(f"Premium, when nothing is wrong: {focus}", columns, tuple(rows), note=note)
+    return Table(f"Premium, when nothing is wrong: {focus}", tuple(columns), tuple(rows), note=note)
 
 
 def protection_table(view: View, focus: str) -> Table:
@@ -221,7 +223,8 @@ def _verdict_cell(view: View, axis: Axis, severity: float, procedure: str, focus
     if verdict[1] not in ("coverage", "size") and verdict[0] != "holds":
         told = f"{told} {verdict[1].replace('_', ' ')} {verdict[2]:.2g}".strip()
     kind = verdict[0]
-    if kind == "holds" and reading is not None and view.bounds is not None and bounds == view.bounds and reading.low > bounds[1]:
+    covers = view.reading(axis, severity, procedure, focus, "coverage")
+    if kind == "holds" and covers is not None and view.bounds is not None and covers.low > view.bounds[1]:
         return Cell(f"{SIGNS[kind]}↑ {told}", "wasteful", "holds, wider than needed, ")
     return Cell(f"{SIGNS.get(kind, '')} {told}".strip(), kind, _said(verdict))
 

@@ -111,11 +111,12 @@ class View:
 
     @cached_property
     def _readings(self) -> dict[tuple[Hashable, ...], Reading]:
-        found = {}
+        found: dict[tuple[Hashable, ...], Reading] = {}
         for row in self._of_this_size(self.outcome.measures):
-            values = (row.value, row.mc_se, row.low, row.high, row.shift, row.shift_se)
-            reading = Reading(*map(float, values), str(row.method), _count(row.repetitions), _count(row.failures))
-            found[(_axis(row), float(row.severity), row.procedure, row.focus, row.measure)] = reading
+            found[(_axis(row), float(row.severity), row.procedure, row.focus, row.measure)] = Reading(
+                float(row.value), float(row.mc_se), float(row.low), float(row.high), float(row.shift), float(row.shift_se),
+                str(row.method), _count(row.repetitions), _count(row.failures),
+            )  # fmt: skip
         return found
 
     @cached_property
@@ -163,12 +164,12 @@ class View:
 
     def ranked(self, focus: str) -> list[Axis]:
         """Every axis, what to worry about first coming first."""
-        order = [_axis(row) for row in self.outcome.ranking.itertuples() if row.focus == focus]
+        order = [_axis(row) for row in _rows(self.outcome.ranking) if row.focus == focus]
         return [axis for axis in unique([*order, *self.ladders]) if axis in self.ladders]
 
     def rank(self, axis: Axis, procedure: str, focus: str) -> Any | None:
         """The row of the ranking, as a named tuple; None where there is none."""
-        for row in self.outcome.ranking.itertuples():
+        for row in _rows(self.outcome.ranking):
             if (_axis(row), row.procedure, row.focus) == (axis, procedure, focus):
                 return row
         return None
@@ -182,7 +183,7 @@ class View:
         alone = Axis(axis.departure, axis.along, "")
         if not stacked and axis != alone and (alone in self.ladders or self._stacks(alone) > 1):
             return None
-        for row in self.outcome.tipping.itertuples():
+        for row in _rows(self.outcome.tipping):
             at = (str(row.departure), _text(row.along), row.procedure, row.focus)
             if at == (axis.departure, axis.along, procedure, focus) and (not stacked or _text(row.stack) == axis.stack):
                 return row
@@ -193,7 +194,7 @@ class View:
 
     def worst(self, axis: Axis, focus: str) -> float:
         """The severity to compare procedures at: the worst that the ranking names and the table has, else the last tried."""
-        for row in self.outcome.ranking.itertuples():
+        for row in _rows(self.outcome.ranking):
             if (_axis(row), row.focus) == (axis, focus):
                 tried = [severity for severity, _ in self.ladders[axis]]
                 return min(tried, key=lambda severity: abs(severity - row.worst_severity))
@@ -223,6 +224,10 @@ class View:
 def unique(values: Iterable[Any]) -> list[Any]:
     """Values without repeats, in the order of their first appearance."""
     return list(dict.fromkeys(values))
+
+
+def _rows(table: pd.DataFrame) -> Iterable[Any]:
+    return table.itertuples(index=False)
 
 
 def _axis(row: Any) -> Axis:

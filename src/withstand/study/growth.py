@@ -39,8 +39,8 @@ class Growth(ABC):
 
     @property
     def smallest(self) -> int:
-        """The smallest number of rows: one residual degree of freedom."""
-        return self.study.design.p + 1
+        """The smallest number of rows: those there are. Fewer would be another design, without some of the far rows."""
+        return self.study.n
 
     @property
     def step(self) -> int:
@@ -255,8 +255,9 @@ class Planned(Growth):
 
     @property
     def smallest(self) -> int:
-        """See Growth."""
-        return int(getattr(self.study.grow, "smallest", super().smallest))
+        """See Growth: one residual degree of freedom."""
+        least = self.study.design.p + 1
+        return -(-least // self.step) * self.step
 
     def at(self, n: int) -> Study:
         """See Growth."""

@@ -1,0 +1,129 @@
+"""A study without data: a table laid out by a plan, stated coefficients, and an error SD stated or worked out."""
+
+from __future__ import annotations
+
+import hashlib
+import math
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field, replace
+from functools import cached_property
+from types import MappingProxyType
+from typing import Literal
+
+import numpy as np
+import pandas as pd
+
+from withstand.errors import InputError, ScenarioError, nearest
+from withstand.study.columns import Blocks, Drawn, InSequence, Levels, PlannedColumn, Shares
+from withstand.study.design import Design, Floats
+from withstand.study.focus import Focus
+from withstand.study.growth import full_rank_draw
+from withstand.study.layout import Layout
+from withstand.study.pilot import Pilot
+from withstand.study.study import FixedRows, Study
+
+__all__ = [
+    "Blocks",
+    "Drawn",
+    "InSequence",
+    "Levels",
+    "Pilot",
+    "PlannedColumn",
+    "Shares",
+    "StudyPlan",
+    "planned_study",
+    "replanned",
+]
+
+_SHOWN_STREAM = 3000
+"""Separates the table that is shown from those drawn in blocks."""
+
+_TABLES_FOR_VARIANCE = 100
+"""Tables over which the variance of the mean is averaged where R squared is given."""
+
+
+@dataclass(frozen=True)
+class StudyPlan:
+    """What will be collected, and what is thought to be true.
+
+    Parameters
+    ----------
+    rows : int
+        Rows to collect.
+    columns : mapping of str to PlannedColumn
+        The predictors, and columns that give order or groups.
+    coefficients : mapping of str to float
+        By name of the model column, in units of the response; those not named are 0.
+    error_sd : float, optional
+        SD of the errors, in the unit of the response.
+    r_squared : float, optional
+        Share of the variance of the response that the model explains, in place of `error_sd`.
+    pilot : Pilot, optional
+        A small table that gives the error SD, in its place; coefficients not named are those fitted to it.
+    draw : {"fresh", "once"}
+        Whether random columns are drawn anew in each block of replicates.
+    attrition : float
+        Share of the rows lost at random.
+    seed : int
+        Seed of the table that is shown, and of the only one where `draw` is "once".
+
+    Raises
+    ------
+    ScenarioError
+        If anything is impossible or missing.
+    """
+
+    rows: int
+    columns: Mapping[str, PlannedColumn]
+    coefficients: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
+    error_sd: float | None = None
+    r_squared: float | None = None
+    pilot: Pilot | None = None
+    draw: Literal["fresh", "once"] = "fresh"
+    attrition: float = 0.0
+    seed: int = 1
+
+    def __post_init__(self) -> None:
+        if self.rows < 2:
+            raise ScenarioError(f"the plan has {self.rows} rows", where="study.plan.rows", remedy="Give 2 or more.")
+        given = [name for name in ("error_sd", "r_squared", "pilot") if getattr(self, name) is not None]
+        if len(given) != 1:
+            raise ScenarioError(
+                f"the size of the errors is given by {' and '.join(given)}" if given else "nothing says how large the errors are",
+                where="study.plan",
+                remedy="Give one of error_sd, r_squared and pilot.",
+            )
+        if self.error_sd is not None and not 0.0 < self.error_sd < math.inf:
+            raise ScenarioError(
+                f"error_sd is {self.error_sd:g}", where="study.plan.error_sd", remedy="Give a positive number."
+            )
+        if self.r_squared is not None and not 0.0 < self.r_squared < 1.0:
+            raise ScenarioError(
+                f"r_squared is {self.r_squared:g}", where="study.plan.r_squared", remedy="Give a share between 0 and 1."
+            )
+        if self.draw not in ("fresh", "once"):
+            raise ScenarioError(f"draw is '{self.draw}'", where="study.plan.draw", remedy="Known: fresh, once.")
+        for name, value in self.coefficients.items():
+            if not math.isfinite(value):
+                raise ScenarioError(
+                    f"the coefficient of '{name}' is {value:g}", where="study.plan.coefficients", remedy="Give a number."
+                )
+        self.layout  # noqa: B018  # checks the columns
+
+    @cached_property
+    def layout(self) -> Layout:
+        """The columns, ready to be laid out."""
+        return Layout(self.columns, self.attrition)
+
+    @property
+    def fixed(self) -> bool:
+        """Whether every block of replicates has the same table."""
+        return self.draw == "once" or not self.layout.random
+
+    @property
+    def digest(self) -> str:
+        """Hash of all that is stated."""
+        told = [f"{name}={column!r}" for name, column in self.columns.items()]
+        told += [f"{name}={value!r}" for name, value in sorted(self.coefficients.items())]
+        told += [repr((self.rows, self.error_sd, self.r_squared, self.pilot, self.draw, self.attrition, self.seed))]
+        return hashlib.sha256("|".join(told).encode()).hexdigest()
