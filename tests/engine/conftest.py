@@ -16,9 +16,7 @@ def make_study(n=24, p=3, seed=5, effect=0.8):
     columns = {name: X[:, i] for i, name in enumerate(names) if i}
     design = Design(X, names, columns=columns, fitted=X @ np.arange(1.0, p + 1))
     focus = (Focus.coefficient("x1", names, effect),)
-    return Study(
-        "test", "y ~ x", design, focus, np.arange(1.0, p + 1), 2.0, FixedRows(design), digest=f"{n}-{p}-{seed}"
-    )
+    return Study("test", "y ~ x", design, focus, np.arange(1.0, p + 1), 2.0, FixedRows(design), digest=f"{n}-{p}-{seed}")
 
 
 @pytest.fixture

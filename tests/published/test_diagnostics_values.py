@@ -50,7 +50,9 @@ def test_okun_serial_statistics():
     table = sm.datasets.macrodata.load_pandas().data
     growth = 400.0 * np.diff(np.log(table["realgdp"].to_numpy()))
     design = Design(
-        X=np.column_stack([np.ones(len(growth)), growth]), names=("Intercept", "growth"), order=np.arange(len(growth), dtype=float)
+        X=np.column_stack([np.ones(len(growth)), growth]),
+        names=("Intercept", "growth"),
+        order=np.arange(len(growth), dtype=float),
     )
     sample = observed(design, np.diff(table["unemp"].to_numpy()))
     assert design.n == 202

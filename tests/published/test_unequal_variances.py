@@ -141,7 +141,5 @@ def test_large_samples(ratio, theta, size):
     closed = 2 * stats.norm.sf(1.96 * np.sqrt((ratio * theta + 1) / (theta + ratio)))
     assert closed == pytest.approx(size, abs=6e-5)
     design = groups([500 * ratio, 500])
-    found = simulate(
-        design, coefficient(design, "group1"), world(2, np.sqrt(1 / theta)), ["ols"], replicates=20_000
-    )
+    found = simulate(design, coefficient(design, "group1"), world(2, np.sqrt(1 / theta)), ["ols"], replicates=20_000)
     assert agrees(found["ols"]["size"], closed)

@@ -2,7 +2,6 @@
 
 import math
 
-import numpy as np
 import pandas as pd
 import pytest
 
@@ -210,15 +209,3 @@ def bare():
     """One procedure, one departure, simulated, nothing known of the study."""
     one = build(procedures=("huber",), departures=DEPARTURES[5:6], foci=("dry_hours",), planned=True)
     return Outcome(one.title, one.measures, one.verdicts, one.tipping.iloc[:0], one.ranking.iloc[:0])
-
-
-def same_table(left, right):
-    """Same columns, same values to the last bit; missing numbers are equal, missing text is empty text."""
-    assert list(left.columns) == list(right.columns)
-    assert len(left) == len(right)
-    for name in left.columns:
-        if left[name].dtype.kind in "if" and isinstance(left[name].dtype, np.dtype):
-            assert left[name].dtype == right[name].dtype
-            assert np.array_equal(left[name].to_numpy(), right[name].to_numpy(), equal_nan=left[name].dtype.kind == "f")
-        else:
-            assert left[name].fillna("").tolist() == right[name].tolist()

@@ -93,9 +93,9 @@ def test_colours_differ_in_greyscale():
 
 def test_what_there_is_no_figure_for_is_said(bare, rich):
     assert available(View(bare), "dry_hours") == ["coverage", "size", "premium"]
-    with pytest.raises(InputError, match="no numbers for the figure 'harm' of 'dry_hours'.*There is: coverage, size, premium"):
+    with pytest.raises(InputError, match=r"no numbers for the figure 'harm' of 'dry_hours'.*There is: coverage, size, premium"):
         figure(bare, "harm")
-    with pytest.raises(InputError, match="unknown figure 'covrage'.*Did you mean 'coverage'"):
+    with pytest.raises(InputError, match=r"unknown figure 'covrage'.*Did you mean 'coverage'"):
         figure(rich, "covrage")
     with pytest.raises(InputError, match=re.escape("unknown focus 'dry_hour'")):
         figure(rich, "coverage", "dry_hour")

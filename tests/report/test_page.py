@@ -1,3 +1,4 @@
+import itertools
 import re
 from html.parser import HTMLParser
 
@@ -78,7 +79,7 @@ def test_landmarks_headings_and_descriptions(html):
     assert [names.count(tag) for tag in ("header", "nav", "main", "footer", "h1", "script")] == [1, 1, 1, 1, 1, 0]
     assert next(attrs for tag, attrs in reader.tags if tag == "html")["lang"] == "en"
     levels = [int(tag[1]) for tag in names if re.fullmatch(r"h[1-6]", tag)]
-    assert all(after - before <= 1 for before, after in zip(levels, levels[1:], strict=False))
+    assert all(after - before <= 1 for before, after in itertools.pairwise(levels))
     for tag, attrs in reader.tags:
         if tag == "section":
             assert attrs["aria-labelledby"] in reader.ids
@@ -143,14 +144,14 @@ def test_hostile_names_are_text(hostile):
 
 def test_a_plan_has_a_page_without_empty_facts(planned, bare):
     for outcome in (planned, bare):
-        text = " ".join(read(page(outcome)).text)
+        text = " ".join(read(page(outcome, {})).text)
         assert "36 rows, planned or as given" in text
         assert "None" not in text
         assert not re.search(r"\bnan\b", text)
 
 
 def test_ids_of_a_figure_get_a_prefix_and_its_style_stays_inside():
-    svg = b'<?xml version="1.0"?><svg width="1"><style type="text/css">*{a: b}</style><g id="x"/><use href="#x" clip-path="url(#x)"/></svg>'
+    svg = b'<svg width="1"><style type="text/css">*{a: b}</style><g id="x"/><use href="#x" clip-path="url(#x)"/></svg>'
     told = str(inline_svg(svg, "f1", 'a "b" <c>'))
     assert 'id="f1-x"' in told
     assert 'href="#f1-x" clip-path="url(#f1-x)"' in told

@@ -96,11 +96,12 @@ class Kernel:
         noise = BlockNoise(self.job.seed, block, self.job.width, self._noise_buffers)
         wanted = sorted({procedure for procedures in active.values() for procedure in procedures})
         self._visit(BASELINE, wanted, noise)
-        for procedure in wanted:
-            for focus in range(len(self._foci)):
-                pair = self._pair(procedure, focus)
-                pair[FEATURES:] = pair[:FEATURES]
-        results = {(BASELINE, procedure): self._tallies(procedure) for procedure in active.get(BASELINE, ())}
+        if active.keys() != {BASELINE}:
+            for procedure in wanted:
+                for focus in range(len(self._foci)):
+                    pair = self._pair(procedure, focus)
+                    pair[FEATURES:] = pair[:FEATURES]
+        results = {(BASELINE, procedure): self._tallies(procedure, baseline=True) for procedure in active.get(BASELINE, ())}
         for world, procedures in active.items():
             if world != BASELINE:
                 self._visit(world, procedures, noise)
@@ -141,9 +142,11 @@ class Kernel:
             self._prepared[index] = Prepared(procedure, fitter, answered)
         return self._prepared[index]
 
-    def _tallies(self, procedure: int) -> list[Tally | None]:
+    def _tallies(self, procedure: int, *, baseline: bool = False) -> list[Tally | None]:
         return [
-            None if (procedure, focus) in self.job.refusals else Tally.of_block(self._pair(procedure, focus), self._fresh)
+            None
+            if (procedure, focus) in self.job.refusals
+            else Tally.of_block(self._pair(procedure, focus), self._fresh, baseline=baseline)
             for focus in range(len(self._foci))
         ]
 

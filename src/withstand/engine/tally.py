@@ -63,7 +63,7 @@ class Tally:
         return Tally(self.replicates + other.replicates, self.units + other.units, self.products + other.products)
 
     @classmethod
-    def of_block(cls, pair: Floats, fresh: bool) -> Tally:
+    def of_block(cls, pair: Floats, fresh: bool, *, baseline: bool = False) -> Tally:
         """The tally of one block.
 
         Parameters
@@ -72,6 +72,8 @@ class Tally:
             Features of the world above those of the baseline.
         fresh : bool
             Whether the block has a design of its own.
+        baseline : bool
+            Whether the world is the baseline itself, so that the halves of `pair` are equal.
 
         Raises
         ------
@@ -82,6 +84,9 @@ class Tally:
         if fresh:
             means = pair.mean(axis=1)
             products, units = np.outer(means, means), 1
+        elif baseline:
+            own = pair[:FEATURES]
+            products, units = np.tile(own @ own.T, (2, 2)), width
         else:
             products, units = pair @ pair.T, width
         if not np.isfinite(products).all():
@@ -162,7 +167,10 @@ def record(out: Floats, fit: Fit, questions: Questions, *, sized: Fit | None = N
     else:
         out[Feature.BELOW : Feature.ABOVE + 1] = 0.0
         out[Feature.COVERED] = ~fit.rejects(questions.truth)
-    _test(out[Feature.REJECTED], sized or fit, questions.null)
+    if sized is None and fit.dual and questions.null is questions.truth:
+        np.subtract(1.0, out[Feature.COVERED], out=out[Feature.REJECTED])
+    else:
+        _test(out[Feature.REJECTED], sized or fit, questions.null)
     _test(out[Feature.POWERED], powered or fit, questions.alternative)
     failed = _any_failed(fit, sized, powered)
     if failed is not None and failed.any():

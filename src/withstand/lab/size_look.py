@@ -99,26 +99,28 @@ class Look:
         )
         return TableGrid(study, plan)
 
-    def answers(self, study: Study, seed: int) -> dict[int, CellAnswers]:
-        """Answers by number of the condition, with as many replicates as it takes to tell, up to the cap."""
+    def answers(self, study: Study, seed: int, to_the_cap: bool = False) -> dict[int, CellAnswers]:
+        """Answers by number of the condition, with as many replicates as it takes to tell, or as many as the cap allows."""
         grid = self.grid(study, seed)
         cells = self._cells()
         found: dict[int, CellAnswers] = {}
         if not study.rows.fixed and self.effort.method == "auto":
-            found = self._averaged(grid, cells)
+            found = self._averaged(grid, cells, to_the_cap)
         if all(self._answered(i, found.get(i, {})) for i in cells):
             return found
         means = Means(workers=self.effort.workers, progress=self.progress)
         ledger = Ledger(None)
         try:
-            evidence = gather(grid, Bench(means, ledger, self.executor), lambda now, some: self._settled(now, some, cells, found))
+            evidence = gather(grid, Bench(means, ledger, self.executor), lambda now, some: not to_the_cap and self._settled(now, some, cells, found))
         finally:
             ledger.close()
         return {i: evidence.answers(evidence.cells[place]) | found.get(i, {}) for i, place in cells.items()}
 
-    def readings(self, study: Study, seed: int) -> tuple[dict[str, Reading], dict[int, CellAnswers]]:
+    def readings(
+        self, study: Study, seed: int, to_the_cap: bool = False
+    ) -> tuple[dict[str, Reading], dict[int, CellAnswers]]:
         """The requirements' measures by key, and everything that was found."""
-        answers = self.answers(study, seed)
+        answers = self.answers(study, seed, to_the_cap)
         read = {}
         for requirement in self.requirements:
             condition, _, name = requirement.key.partition("|")
@@ -156,7 +158,7 @@ class Look:
         chance = spending(self.effort.delta, look) / len(self.requirements)
         return abs(requirement.margin(seen.value)) > float(stats.norm.isf(chance / 2.0)) * seen.se
 
-    def _averaged(self, grid: Grid, cells: Mapping[int, int]) -> dict[int, CellAnswers]:
+    def _averaged(self, grid: Grid, cells: Mapping[int, int], to_the_cap: bool) -> dict[int, CellAnswers]:
         """Exact answers given the table, averaged over drawn tables: their spread is the only error left."""
         study = grid.study
         values: dict[int, dict[str, list[float]]] = {i: {} for i in cells}
@@ -180,7 +182,7 @@ class Look:
                 self._clear(requirement, reading(found[int(requirement.key.partition("|")[0])], name), look)
                 for requirement, (_, name) in zip(self.requirements, self._asked(), strict=True)
             ]
-            if all(clear):
+            if all(clear) and not to_the_cap:
                 break
         return found
 

@@ -405,7 +405,7 @@ class _OneProcedure:
         if self._refused(n) is not None:
             return SizePoint(n, {r.key: _no_answer(r) for r in self.requirements})
         study = self.question.at(n)
-        readings, answers = self._look.readings(study, noise_seed(self.question.effort.seed, n, turn))
+        readings, answers = self._look.readings(study, noise_seed(self.question.effort.seed, n, turn), turn > 0)
         self._simulated |= any(not reading.exact for reading in readings.values())
         self.rows += self._curve_rows(n, study.n, look, answers)
         return SizePoint(n, readings)

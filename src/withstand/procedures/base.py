@@ -17,7 +17,7 @@ from scipy import stats
 
 from withstand.errors import ScenarioError, nearest
 from withstand.procedures.fit import Fit, WaldFit
-from withstand.procedures.forms import ResidualForm
+from withstand.procedures.forms import ResidualForm, evaluate_all
 from withstand.procedures.sample import Sample
 from withstand.study.design import Design, Floats
 from withstand.study.focus import Focus, FocusKind
@@ -122,20 +122,19 @@ class LinearProcedure(Procedure):
     def prepare(self, design: Design, foci: Sequence[Focus], level: float) -> Fitter:
         """See Procedure."""
         used = self.fitted_design(design)
-        constants = []
-        for focus in foci:
-            A = used.estimator(focus.L)
-            predicts = focus.kind is FocusKind.NEW
-            constants.append((used.basis_rows(focus.L), self.form(used, A), self.critical(used, A, level), predicts))
+        estimators = [used.estimator(focus.L) for focus in foci]
+        bases = [used.basis_rows(focus.L) for focus in foci]
+        forms = [self.form(used, A) for A in estimators]
+        criticals = [self.critical(used, A, level) for A in estimators]
+        predicts = [focus.kind is FocusKind.NEW for focus in foci]
 
         def fit(sample: Sample) -> list[Fit]:
             seen = sample.weighted if self.weighted else sample
             fits: list[Fit] = []
-            for basis, form, critical, predicts in constants:
-                covariance = form.evaluate(seen)
-                if predicts:
-                    covariance = covariance + seen.residual_sum / used.df
-                fits.append(WaldFit(basis @ seen.projections, None, covariance, critical))
+            covariances = evaluate_all(forms, seen)
+            for basis, covariance, critical, predict in zip(bases, covariances, criticals, predicts, strict=True):
+                claimed = covariance + seen.residual_sum / used.df if predict else covariance
+                fits.append(WaldFit(basis @ seen.projections, None, claimed, critical))
             return fits
 
         return fit

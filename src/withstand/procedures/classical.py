@@ -4,10 +4,8 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-import numpy as np
-
 from withstand.procedures.base import LinearProcedure, register
-from withstand.procedures.forms import Diagonal, ResidualForm
+from withstand.procedures.forms import ResidualForm, Uniform
 from withstand.study.design import Design, Floats
 from withstand.study.focus import Focus, FocusKind
 
@@ -25,7 +23,7 @@ class Ols(LinearProcedure):
 
     def form(self, design: Design, A: Floats) -> ResidualForm:
         """(A A') e'e / (n - p)."""
-        return Diagonal(np.repeat((A @ A.T / design.df)[:, :, None], design.n, axis=2))
+        return Uniform.of(A @ A.T / design.df, design.n)
 
 
 @register

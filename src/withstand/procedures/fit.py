@@ -50,6 +50,11 @@ class Fit(ABC):
         `truth` is (k,), or (1, B) for new responses. None where there is no interval (tests only, joint regions).
         """
 
+    @property
+    def dual(self) -> bool:
+        """Whether the test rejects exactly where the interval misses, so that one answers for both."""
+        return False
+
     @abstractmethod
     def rejects(self, value: Floats) -> Flags:
         """Whether the test of 'the focal quantity is `value` (k,)' rejects, (B,).
@@ -77,6 +82,11 @@ class WaldFit(Fit):
     def variance(self) -> Floats | None:
         """See Fit."""
         return self.covariance[0, 0] if len(self.estimate) == 1 else None
+
+    @property
+    def dual(self) -> bool:
+        """See Fit."""
+        return len(self.estimate) == 1
 
     @cached_property
     def half(self) -> Floats:
@@ -127,6 +137,11 @@ class IntervalFit(Fit):
     def variance(self) -> Floats | None:
         """See Fit."""
         return self.claimed
+
+    @property
+    def dual(self) -> bool:
+        """See Fit."""
+        return self.test is None
 
     @property
     def width(self) -> Floats | None:

@@ -7,6 +7,7 @@ read the same matrices, so that both rest on a single definition.
 from __future__ import annotations
 
 from abc import ABC, abstractmethod
+from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
 
@@ -60,6 +61,49 @@ class Diagonal(ResidualForm):
     def times(self, M: Floats) -> Floats:
         """See ResidualForm."""
         return np.asarray(self.weights[0, 0][:, None] * M)
+
+
+@dataclass(frozen=True, eq=False)
+class Uniform(Diagonal):
+    """V_ij = c_ij sum_t e_t^2: Diagonal with equal weights, from the residual sum of squares that is shared.
+
+    Parameters
+    ----------
+    weights : ndarray of shape (k, k, n)
+        c, repeated over the rows.
+    """
+
+    @classmethod
+    def of(cls, c: Floats, n: int) -> Uniform:
+        """The form with factors c (k, k) on n rows."""
+        return cls(np.broadcast_to(c[:, :, None], (*c.shape, n)))
+
+    def evaluate(self, sample: Sample) -> Floats:
+        """See ResidualForm."""
+        return np.asarray(self.weights[:, :, :1] * sample.residual_sum)
+
+
+def evaluate_all(forms: Sequence[ResidualForm], sample: Sample) -> list[Floats]:
+    """Evaluate several forms; those with plain diagonals share one product with the squared residuals.
+
+    Parameters
+    ----------
+    forms : sequence of ResidualForm
+        Forms of one procedure, one a focal quantity.
+    sample : Sample
+        The block.
+
+    Returns
+    -------
+    list of ndarray of shape (k, k, B)
+        One a form.
+    """
+    if len(forms) < 2 or not all(type(form) is Diagonal for form in forms):
+        return [form.evaluate(sample) for form in forms]
+    stacked = np.concatenate([form.weights.reshape(form.k**2, -1) for form in forms if isinstance(form, Diagonal)])
+    values = stacked @ sample.squared_residuals
+    ends = np.cumsum([form.k**2 for form in forms])[:-1]
+    return [part.reshape(form.k, form.k, -1) for form, part in zip(forms, np.split(values, ends), strict=True)]
 
 
 @dataclass(frozen=True, eq=False)

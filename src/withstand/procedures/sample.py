@@ -94,7 +94,12 @@ class Sample:
     @cached_property
     def squared_residuals(self) -> Floats:
         """Squared least-squares residuals (n, B). Not to be written to."""
-        return np.multiply(self.residuals, self.residuals, out=self.buffer("squared residuals"))
+        if "residuals" in self.__dict__:
+            return np.multiply(self.residuals, self.residuals, out=self.buffer("squared residuals"))
+        # Many procedures look at the squares alone: made in place, they leave the block and one work array in the cache.
+        squares = np.matmul(self.design.Q, self.projections, out=self.buffer("squared residuals"))
+        np.subtract(self.errors, squares, out=squares)
+        return np.multiply(squares, squares, out=squares)
 
     @cached_property
     def residual_sum(self) -> Floats:

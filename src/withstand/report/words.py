@@ -11,12 +11,6 @@ from withstand.report.view import Reading
 SIGNS = {"holds": "✓", "gives": "✗", "unsettled": "?"}
 """A sign for every verdict, so that none depends on colour."""
 
-MEANING = {
-    "holds": "the interval keeps its coverage, and the other judged measures stay within tolerance",
-    "gives": "a judged measure is outside tolerance",
-    "unsettled": "the simulation reached its cap before the verdict was clear",
-}
-
 
 def number(value: float, digits: int = 3) -> str:
     """A number with `digits` significant digits, without exponent where that is readable."""

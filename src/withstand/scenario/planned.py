@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Annotated, Any, Literal, Self
+from typing import Any, Literal, Self
 
 from pydantic import Field, model_validator
 
@@ -64,7 +64,8 @@ class PlanPart(Part):
     r_squared: float | None = Field(default=None, gt=0.0, lt=1.0, description="Share of variance explained, in its place.")
     pilot: str | None = Field(default=None, description="A small table to take the error SD and coefficients from.")
     coefficients: dict[str, float] = Field(default={}, description="True coefficients by name of the model column.")
-    columns: dict[str, Annotated[ColumnPart, Field()]] = Field(description="The predictors.", min_length=1)
+    columns: dict[str, ColumnPart] = Field(description="The predictors.", min_length=1)
+    attrition: float = Field(default=0.0, ge=0.0, lt=1.0, description="Share of the rows lost at random.")
     draw: Literal["fresh", "once"] = Field(
         default="fresh", description='Random columns drawn anew in each block of replicates, or "once" for all.'
     )

@@ -1,0 +1,3 @@
+"""From the planned study of a scenario to a study."""
+
+from __future__ import annotations
