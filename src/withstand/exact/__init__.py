@@ -1,1 +1,12 @@
-"""Answers without simulation: moments for any law, coverage, size and power for normal errors."""
+"""Answers without simulation: moments for any law, coverage, size and power for normal errors.
+
+`problem` brings a question into unit coordinates; a structure (`grouped`, `chain`, `band`, `modes`) gives the tilted laws of
+`tilt` without an n x n matrix; `contour` integrates them to probabilities.
+"""
+
+from withstand.exact.coverage import ExactResult, coverage
+from withstand.exact.moments import Moments, moments
+from withstand.exact.power import detectable_effect, power
+from withstand.exact.structure import can_be_exact
+
+__all__ = ["ExactResult", "Moments", "can_be_exact", "coverage", "detectable_effect", "moments", "power"]

@@ -35,82 +35,56 @@ class BandSweep:
     """
 
     def __init__(self, columns: Floats, p: int, lags: Floats, spread: Floats, links: Floats) -> None:
+        L, n = lags.shape[0] - 1, spread.size
         self._log_determinant = float(np.sum(np.log1p(-(links**2))))
-        scaled = lags.copy()
-        for lag in range(len(lags)):
-            scaled[lag, lag:] *= spread[lag:] * spread[: spread.size - lag]
         diagonal, beside = chain_precision(links)
-        self._fixed = np.zeros((2, spread.size))
-        self._fixed[0] = diagonal
-        self._fixed[1, 1:] = beside
-        self._lags = scaled
+        # Elements beside and on the diagonal by lag; L unit rows past the end, coupled to nothing, flush the window.
+        self._steady = np.zeros((n + L, L + 1, 1))
+        self._moving = np.zeros((n + L, L + 1, 1))
+        self._steady[:n, 0, 0] = diagonal
+        self._steady[1:n, 1, 0] = beside
+        self._steady[n:, 0] = 1.0
+        for lag in range(L + 1):
+            self._moving[lag:n, lag, 0] = lags[lag, lag:] * spread[lag:] * spread[: n - lag]
         left = columns / spread[:, None]
         carried = tridiagonal(diagonal, beside, left)
-        self._borders = np.hstack([spread[:, None] * columns[:, :p], carried])
+        self._borders = np.zeros((n + L, p + columns.shape[1], 1))
+        self._borders[:n, :, 0] = np.hstack([spread[:, None] * columns[:, :p], carried])
         self._whole = left.T @ carried
-        self._p = p
+        self._n, self._L, self._p = n, L, p
 
     def pieces(self, theta: Values) -> Pieces:
         """See Structure."""
-        p, t, n = self._p, theta.size, self._borders.shape[0]
-        width = self._lags.shape[0] - 1
+        n, L, p, t = self._n, self._L, self._p, theta.size
         m = self._borders.shape[1]
         log_determinant = np.full(t, self._log_determinant, dtype=theta.dtype)
         total = np.zeros((t, m, m), dtype=theta.dtype)
-        # Rows past the end are decoupled unit rows without borders.
-        window = np.zeros((width, width, t), dtype=theta.dtype)
-        border = np.zeros((width, m, t), dtype=theta.dtype)
-        for j in range(width):
-            self._enter(j, window[j, : j + 1], border[j], theta)
-            window[: j, j] = window[j, : j]
+        window = np.zeros((L, L, t), dtype=theta.dtype)
+        border = np.zeros((L, m, t), dtype=theta.dtype)
+        border[:] = self._borders[:L]
+        for j in range(L):
+            elements = self._steady[j] + self._moving[j] * theta
+            window[j, : j + 1] = window[: j + 1, j] = elements[j::-1]
         kept = np.empty((_FLUSH, m, t), dtype=theta.dtype)
         pivots = np.empty((_FLUSH, t), dtype=theta.dtype)
-        entering = np.empty((width, t), dtype=theta.dtype)
         for i in range(n):
             at = i % _FLUSH
-            pivots[at] = window[0, 0]
-            kept[at] = border[0]
-            column = window[1:, 0] / window[0, 0]
-            new = np.empty_like(window)
-            np.subtract(window[1:, 1:], column[:, None] * window[None, 0, 1:], out=new[:-1, :-1])
-            border[:-1] = border[1:] - column[:, None] * border[None, 0]
-            # The entering row also meets the row eliminated now, at lag `width`.
-            self._enter(i + width, entering, border[-1], theta, own=new[-1, -1:])
-            new[-1, :-1] = entering[1:]
-            far = entering[0] / window[0, 0]
-            new[-1, :-1] -= far * window[0, 1:]
-            new[:-1, -1] = new[-1, :-1]
-            new[-1, -1] -= far * entering[0]
-            border[-1] -= far * kept[at]
-            window = new
+            pivots[at], kept[at] = window[0, 0], border[0]
+            # The window moves on by one row: what is left of the old rows goes up and left, the entering row comes last.
+            elements = self._steady[i + L] + self._moving[i + L] * theta
+            coupling = np.concatenate([window[0, 1:], elements[L:]])
+            shares = coupling / pivots[at]
+            moved = np.empty_like(window)
+            moved[:-1, :-1] = window[1:, 1:]
+            moved[-1, ::-1] = moved[::-1, -1] = elements[:L]
+            moved -= shares[:, None] * coupling[None]
+            border[:-1] = border[1:]
+            border[-1] = self._borders[i + L]
+            border -= shares[:, None] * kept[at]
+            window = moved
             if at == _FLUSH - 1 or i == n - 1:
                 log_determinant += np.log(pivots[: at + 1]).sum(axis=0)
                 rows = kept[: at + 1].transpose(2, 1, 0)
                 total += (rows / pivots[: at + 1].T[:, None, :]) @ rows.transpose(0, 2, 1)
         products = np.moveaxis(total, 0, 2)
-        A = self._whole[:, :, None] - products[p:, p:]
-        return Pieces(log_determinant, A, products[p:, :p], products[:p, :p])
-
-    def _enter(self, row: int, entries: Values, border: Values, theta: Values, own: Values | None = None) -> None:
-        """Write the elements of an entering row: `entries` beside the diagonal, nearest last, with the diagonal in `own`.
-
-        Without `own`, `entries` ends with the diagonal.
-        """
-        n = self._borders.shape[0]
-        if row >= n:
-            entries[:] = 0.0
-            border[:] = 0.0
-            (entries[-1:] if own is None else own)[:] = 1.0
-            return
-        first = 0 if own is None else 1
-        count = len(entries)
-        lags = np.arange(count - 1 + first, first - 1, -1)
-        values = self._lags[lags, row][:, None] * theta
-        for lag in (0, 1):
-            place = count - 1 + first - lag
-            if 0 <= place < count:
-                values[place] += self._fixed[lag, row]
-        entries[:] = values
-        border[:] = self._borders[row][:, None]
-        if own is not None:
-            own[0] = self._lags[0, row] * theta + self._fixed[0, row]
+        return Pieces(log_determinant, self._whole[:, :, None] - products[p:, p:], products[p:, :p], products[:p, :p])

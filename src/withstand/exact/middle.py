@@ -65,6 +65,12 @@ class GroupedMiddle:
         count = int(self.codes.max()) + 1
         return np.stack([np.bincount(self.codes, self.b * column, minlength=count) for column in M.T], axis=1)
 
+    def as_rows(self) -> RowsMiddle:
+        """The same D with every b_g written out, (G, n)."""
+        rows = np.zeros((int(self.codes.max()) + 1, self.b.size))
+        rows[self.codes, np.arange(self.b.size)] = self.b
+        return RowsMiddle(rows, self.ridge)
+
     def times(self, M: Floats) -> Floats:
         """D M, (n, m)."""
         return np.asarray(self.b[:, None] * self.sums(M)[self.codes] + self.ridge * M)

@@ -56,7 +56,9 @@ class Instead:
         )
 
 
-def instead_of_observed_power(study: Study, procedure: Procedure, focus: str | None = None, effort: Effort | None = None) -> Instead:
+def instead_of_observed_power(
+    study: Study, procedure: Procedure, focus: str | None = None, effort: Effort | None = None
+) -> Instead:
     """Interval and detectable effect.
 
     Parameters
@@ -83,7 +85,9 @@ def instead_of_observed_power(study: Study, procedure: Procedure, focus: str | N
     reason = procedure.not_applicable(study.design, chosen)
     if reason is not None or not chosen.scalar:
         why = reason or "not applicable, because there is no single interval for several coefficients at once"
-        raise ScenarioError(f"'{procedure.identity}' for '{chosen.name}' is {why}", where="focus", remedy="Choose another focus.")
+        raise ScenarioError(
+            f"'{procedure.identity}' for '{chosen.name}' is {why}", where="focus", remedy="Choose another focus."
+        )
     effort = effort or Effort()
     errors = (study.residuals / study.error_sd)[:, None]
     sample = Sample(
@@ -113,5 +117,7 @@ def _ends(fit: Fit, centre: float, unit: float) -> tuple[float, float]:
         case IntervalFit(low=before, high=after) if before is not None and after is not None:
             low, high = before[0], after[0]
         case _:
-            raise ScenarioError("this procedure gives no interval", where="--procedure", remedy="Choose one that does, such as ols.")
+            raise ScenarioError(
+                "this procedure gives no interval", where="--procedure", remedy="Choose one that does, such as ols."
+            )
     return centre + unit * float(low), centre + unit * float(high)

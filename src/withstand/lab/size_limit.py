@@ -119,9 +119,7 @@ def passing_procedures(
     return tuple(passing)
 
 
-def _limit(
-    study: Study, procedure: LinearProcedure, focus: Focus, large: Disturbance, larger: Disturbance
-) -> Limit | None:
+def _limit(study: Study, procedure: LinearProcedure, focus: Focus, large: Disturbance, larger: Disturbance) -> Limit | None:
     z = float(stats.norm.isf((1.0 - study.level) / 2.0))
     line = replace(focus, kind=FocusKind.MEAN) if focus.kind is FocusKind.NEW else focus
     before = moments(procedure, large.design, line, large)

@@ -111,14 +111,16 @@ class Look:
         means = Means(workers=self.effort.workers, progress=self.progress)
         ledger = Ledger(None)
         try:
-            evidence = gather(grid, Bench(means, ledger, self.executor), lambda now, some: not to_the_cap and self._settled(now, some, cells, found))
+            evidence = gather(
+                grid,
+                Bench(means, ledger, self.executor),
+                lambda now, some: not to_the_cap and self._settled(now, some, cells, found),
+            )
         finally:
             ledger.close()
         return {i: evidence.answers(evidence.cells[place]) | found.get(i, {}) for i, place in cells.items()}
 
-    def readings(
-        self, study: Study, seed: int, to_the_cap: bool = False
-    ) -> tuple[dict[str, Reading], dict[int, CellAnswers]]:
+    def readings(self, study: Study, seed: int, to_the_cap: bool = False) -> tuple[dict[str, Reading], dict[int, CellAnswers]]:
         """The requirements' measures by key, and everything that was found."""
         answers = self.answers(study, seed, to_the_cap)
         read = {}

@@ -55,7 +55,9 @@ class CornerAnswer:
                 told.append(f"{procedure}: at no corner is there a number of rows; {rows['reason'].iloc[0]}.")
                 continue
             least, most = (known.loc[known["n"].astype(int).idxmin()], known.loc[known["n"].astype(int).idxmax()])
-            text = f"{procedure}: {int(least['n'])} rows ({self._corner(least)}) to {int(most['n'])} rows ({self._corner(most)})"
+            text = (
+                f"{procedure}: {int(least['n'])} rows ({self._corner(least)}) to {int(most['n'])} rows ({self._corner(most)})"
+            )
             lost = len(rows) - len(known)
             told.append(text + (f"; at {lost} of {len(rows)} corners none is enough." if lost else "."))
         return tuple(told)
@@ -110,7 +112,12 @@ def size_over_ranges(
         if "effect" in corner:
             here["effect"] = corner["effect"]
         answer = size_study(
-            _moved(study, corner), procedures, [_at(world, corner) for world in worlds], effort=effort, executor=executor, **here
+            _moved(study, corner),
+            procedures,
+            [_at(world, corner) for world in worlds],
+            effort=effort,
+            executor=executor,
+            **here,
         )
         answers.append(answer)
         rows += [
@@ -148,7 +155,9 @@ def _check(study: Study, worlds: Sequence[World], ranges: Mapping[str, Sequence[
         raise ScenarioError("no ranges to go over", where="--range", remedy="Write error_sd=2,4.")
     if corners > MOST_CORNERS:
         raise ScenarioError(
-            f"the ranges have {corners} corners", where="--range", remedy=f"At most {MOST_CORNERS} are answered; try fewer values."
+            f"the ranges have {corners} corners",
+            where="--range",
+            remedy=f"At most {MOST_CORNERS} are answered; try fewer values.",
         )
 
 

@@ -283,7 +283,9 @@ def _answer(question: SizeQuestion, executor: Executor, progress: Progress) -> S
         question.focus.name,
         tuple(asked),
         tuple(sizes),
-        pd.DataFrame(frames, columns=list(CURVE_COLUMNS)).sort_values(["procedure", "world", "measure", "n"], ignore_index=True),
+        pd.DataFrame(frames, columns=list(CURVE_COLUMNS)).sort_values(
+            ["procedure", "world", "measure", "n"], ignore_index=True
+        ),
         question.growth.sentence,
         1.0 - question.effort.delta,
         question.study.notices,
@@ -462,10 +464,16 @@ def _told(size: ProcedureSize, answer: SizeAnswer) -> str:
         told = f"{size.procedure}: {size.reason}."
         if size.no_cure:
             told += f" With ever more rows it covers {100 * size.limit:.1f} %." if size.limit is not None else ""
-            told += f" These hold: {', '.join(size.instead)}." if size.instead else " None of the procedures with a known limit holds."
+            told += (
+                f" These hold: {', '.join(size.instead)}."
+                if size.instead
+                else " None of the procedures with a known limit holds."
+            )
         return told
-    span = "exactly" if size.low == size.high == size.n and size.method == "exact" else (
-        f"{100 * answer.level:g} % interval {size.low} to {size.high}{'' if size.bounded else ' or more'}"
+    span = (
+        "exactly"
+        if size.low == size.high == size.n and size.method == "exact"
+        else (f"{100 * answer.level:g} % interval {size.low} to {size.high}{'' if size.bounded else ' or more'}")
     )
     told = f"{size.procedure}: {size.n} rows ({span}), for {size.binding}."
     if size.confirmed is not None:

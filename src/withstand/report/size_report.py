@@ -66,9 +66,17 @@ def size_figure(answer: SizeAnswer) -> Figure | None:
     with style.own_style():
         figure = Figure(figsize=(style.WIDTH, _HEIGHT * len(measures) + 0.55))
         top = 1.0 - 0.45 / figure.get_figheight()
-        axes = figure.subplots(len(measures), 1, sharex=True, squeeze=False, gridspec_kw={"top": top, "left": 0.1, "right": 0.98})
+        axes = figure.subplots(
+            len(measures), 1, sharex=True, squeeze=False, gridspec_kw={"top": top, "left": 0.1, "right": 0.98}
+        )
         figure.suptitle(
-            style.drawable(f"{answer.title}: {answer.focus}", 90), x=0.1, y=0.99, ha="left", va="top", fontsize=9.0, fontweight="bold"
+            style.drawable(f"{answer.title}: {answer.focus}", 90),
+            x=0.1,
+            y=0.99,
+            ha="left",
+            va="top",
+            fontsize=9.0,
+            fontweight="bold",
         )
         for panel, measure in zip(axes[:, 0], measures, strict=True):
             _draw(panel, answer, measure)
@@ -126,7 +134,9 @@ def _tick_rows(panel: Axes, sizes: Sequence[int]) -> None:
 
 def size_csv(answer: SizeAnswer) -> str:
     """Everything that was looked at, CURVE_COLUMNS; an infinite bound is an empty cell."""
-    return answer.curve.loc[:, list(CURVE_COLUMNS)].replace([math.inf, -math.inf], np.nan).to_csv(index=False, lineterminator="\n")
+    return (
+        answer.curve.loc[:, list(CURVE_COLUMNS)].replace([math.inf, -math.inf], np.nan).to_csv(index=False, lineterminator="\n")
+    )
 
 
 def size_markdown(answer: SizeAnswer, extra: Sequence[str] = ()) -> str:
@@ -139,7 +149,12 @@ def size_markdown(answer: SizeAnswer, extra: Sequence[str] = ()) -> str:
     extra : sequence of str
         Further paragraphs, such as corners of uncertain inputs.
     """
-    lines = [f"# How many rows: {_plain(answer.title)}", "", f"Focus: {_plain(answer.focus)}. Asked: {_plain(listing(answer.asked))}.", ""]
+    lines = [
+        f"# How many rows: {_plain(answer.title)}",
+        "",
+        f"Focus: {_plain(answer.focus)}. Asked: {_plain(listing(answer.asked))}.",
+        "",
+    ]
     lines += [f"- {_plain(sentence)}" for sentence in answer.sentences]
     lines += [f"- Note: {_plain(notice)}." for notice in answer.notices]
     for paragraph in extra:
@@ -155,7 +170,10 @@ def size_markdown(answer: SizeAnswer, extra: Sequence[str] = ()) -> str:
                 cells = [_cell(tables[measure], n, measure) for measure in measures]
                 method = "exact" if all("±" not in cell for cell in cells) else "simulated"
                 lines.append(f"| {_plain(size.procedure)} | {count(n)} | {' | '.join(cells)} | {method} |")
-        lines += ["", "Each number is that of the worst world asked about; ± is the half width of its 95 % Monte Carlo interval."]
+        lines += [
+            "",
+            "Each number is that of the worst world asked about; ± is the half width of its 95 % Monte Carlo interval.",
+        ]
     return "\n".join(lines) + "\n"
 
 

@@ -203,7 +203,9 @@ class Drawn(PlannedColumn):
     def check(self, name: str) -> None:
         """See PlannedColumn."""
         if self.law not in _PARAMETERS:
-            raise ScenarioError(f"unknown law '{self.law}' of '{name}'", where=_where(name, "law"), remedy=nearest(self.law, _PARAMETERS))
+            raise ScenarioError(
+                f"unknown law '{self.law}' of '{name}'", where=_where(name, "law"), remedy=nearest(self.law, _PARAMETERS)
+            )
         needed = _PARAMETERS[self.law]
         for parameter in ("mean", "sd", "low", "high"):
             given = getattr(self, parameter)

@@ -201,7 +201,7 @@ class Extend(Growth):
             raise ScenarioError(
                 "'extend' lengthens a series, and the study names no order column",
                 where="growth",
-                remedy='Name it with order = "...", or use \'stack\'.',
+                remedy="Name it with order = \"...\", or use 'stack'.",
             )
         if design.groups is not None:
             raise ScenarioError(
@@ -329,4 +329,3 @@ def full_rank_draw(draw: Callable[[], Design]) -> Design:
 def _evenly(ranked: Ints, count: int) -> Ints:
     """`count` members of a ranking, evenly spaced, the middle ones first."""
     return np.asarray(ranked[np.floor((np.arange(count) + 0.5) * len(ranked) / max(count, 1)).astype(np.int64)])
-

@@ -10,7 +10,17 @@ import numpy as np
 import pandas as pd
 
 from withstand.errors import ScenarioError, nearest
-from withstand.study.columns import MOST_CELLS, Blocks, Drawn, InSequence, Levels, PlannedColumn, Shares, crossing, spread_evenly
+from withstand.study.columns import (
+    MOST_CELLS,
+    Blocks,
+    Drawn,
+    InSequence,
+    Levels,
+    PlannedColumn,
+    Shares,
+    crossing,
+    spread_evenly,
+)
 from withstand.study.design import Floats, Ints
 
 

@@ -43,13 +43,19 @@ class Pilot:
     def __post_init__(self) -> None:
         if not FEWEST <= len(self.frame) <= MOST:
             remedy = (
-                'Give it as the data of the study: data = "...".' if len(self.frame) > MOST else "State error_sd and its range instead."
+                'Give it as the data of the study: data = "...".'
+                if len(self.frame) > MOST
+                else "State error_sd and its range instead."
             )
-            raise TableError(f"a pilot has {FEWEST} to {MOST} rows, and this one has {len(self.frame)}", where="pilot", remedy=remedy)
+            raise TableError(
+                f"a pilot has {FEWEST} to {MOST} rows, and this one has {len(self.frame)}", where="pilot", remedy=remedy
+            )
         blank = self.frame.isna().any(axis=1).to_numpy()
         if blank.any():
             raise TableError(
-                f"row {int(np.argmax(blank)) + 1} of the pilot has a blank cell", where="pilot", remedy="Fill it or leave the row out."
+                f"row {int(np.argmax(blank)) + 1} of the pilot has a blank cell",
+                where="pilot",
+                remedy="Fill it or leave the row out.",
             )
 
     def __repr__(self) -> str:

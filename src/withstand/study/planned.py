@@ -89,14 +89,14 @@ class StudyPlan:
         given = [name for name in ("error_sd", "r_squared", "pilot") if getattr(self, name) is not None]
         if len(given) != 1:
             raise ScenarioError(
-                f"the size of the errors is given by {' and '.join(given)}" if given else "nothing says how large the errors are",
+                f"the size of the errors is given by {' and '.join(given)}"
+                if given
+                else "nothing says how large the errors are",
                 where="study.plan",
                 remedy="Give one of error_sd, r_squared and pilot.",
             )
         if self.error_sd is not None and not 0.0 < self.error_sd < math.inf:
-            raise ScenarioError(
-                f"error_sd is {self.error_sd:g}", where="study.plan.error_sd", remedy="Give a positive number."
-            )
+            raise ScenarioError(f"error_sd is {self.error_sd:g}", where="study.plan.error_sd", remedy="Give a positive number.")
         if self.r_squared is not None and not 0.0 < self.r_squared < 1.0:
             raise ScenarioError(
                 f"r_squared is {self.r_squared:g}", where="study.plan.r_squared", remedy="Give a share between 0 and 1."

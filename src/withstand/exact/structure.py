@@ -1,0 +1,123 @@
+"""Which structure answers which problem, and which problems have no exact answer at all."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from withstand.departures.world import Disturbance
+from withstand.exact.band import BandSweep
+from withstand.exact.chain import TridiagonalSolves
+from withstand.exact.correlation import Chain, Correlation, Shared, correlation_of
+from withstand.exact.grouped import RowSums
+from withstand.exact.middle import BandMiddle, DiagonalMiddle, GroupedMiddle, RowsMiddle
+from withstand.exact.modes import dense_modes, group_modes, row_modes
+from withstand.exact.problem import Problem
+from withstand.exact.tilt import Structure
+from withstand.procedures.base import LinearProcedure, Procedure
+from withstand.procedures.classical import Ols
+from withstand.procedures.forms import Banded, Diagonal, Grouped, Squares
+from withstand.study.design import Ints
+from withstand.study.focus import Focus, FocusKind
+
+DENSE_ROWS = 2000
+"""Up to this many rows an n x n matrix is accepted where nothing cheaper fits (a few seconds at the limit)."""
+
+MOST_DIRECTIONS = 2000
+"""Up to this many squares a variance estimate is reduced to the eigenvalues of their covariance."""
+
+_QUICKER_DENSE = {DiagonalMiddle: 120, BandMiddle: 500}
+"""Below this many rows the eigenvalue route is quicker than the sweep along a chain or band (measured, one thread)."""
+
+
+def structure_of(problem: Problem) -> Structure:
+    """The cheapest structure that carries a problem."""
+    middle, correlation = problem.middle, problem.correlation
+    columns, p, spread = problem.columns, problem.p, problem.spread
+    plain = problem.disturbance.dependence is None
+    match middle:
+        case DiagonalMiddle() if plain:
+            return RowSums(columns, p, middle.d, spread)
+        case DiagonalMiddle() if isinstance(correlation, Shared):
+            return RowSums(columns, p, middle.d, spread, correlation.icc, correlation.codes)
+        case DiagonalMiddle() if isinstance(correlation, Chain) and problem.n > _QUICKER_DENSE[DiagonalMiddle]:
+            return TridiagonalSolves(columns, p, middle.d, spread, correlation)
+        case BandMiddle() if _in_row_order(plain, correlation) and problem.n > _QUICKER_DENSE[BandMiddle]:
+            links = correlation.links if isinstance(correlation, Chain) else np.zeros(problem.n)
+            return BandSweep(columns, p, middle.lags, spread, links)
+        case GroupedMiddle() if middle.ridge == 0.0 and _within(plain, correlation, middle.codes):
+            return group_modes(problem, middle)
+        case GroupedMiddle() if middle.ridge == 0.0 and middle.codes.max() < min(problem.n // 2, MOST_DIRECTIONS):
+            return row_modes(problem, middle.as_rows())
+        case RowsMiddle() if middle.ridge == 0.0 and len(middle.rows) < problem.n // 2:
+            return row_modes(problem, middle)
+        case _:
+            return dense_modes(problem)
+
+
+def can_be_exact(procedure: Procedure, focus: Focus, disturbance: Disturbance) -> str | None:
+    """Why coverage, size and power have no exact answer; None if they have.
+
+    Parameters
+    ----------
+    procedure : Procedure
+        Any procedure.
+    focus : Focus
+        The focal quantity.
+    disturbance : Disturbance
+        A world realised on a design.
+
+    Returns
+    -------
+    str or None
+        A reason that reads on from 'not exact, because'.
+    """
+    if not isinstance(procedure, LinearProcedure):
+        return f"'{procedure.name}' is not linear in the response with a variance estimate quadratic in the residuals"
+    if disturbance.law is not None:
+        return "the errors are not normal"
+    if disturbance.outliers:
+        return "outliers strike"
+    if not focus.scalar and not isinstance(procedure, Ols):
+        return f"the joint test with the variance estimate of '{procedure.name}' is not a quadratic form in the errors"
+    design = disturbance.design
+    refusal = procedure.not_applicable(design, focus)
+    if refusal is not None:
+        return f"the procedure is {refusal}"
+    if design.n <= DENSE_ROWS or not focus.scalar:
+        return None
+    used = procedure.fitted_design(design)
+    new = focus.kind is FocusKind.NEW
+    plain = disturbance.dependence is None
+    correlation = None if disturbance.dependence is None else correlation_of(disturbance.dependence)
+    if not plain and correlation is None:
+        fits = False
+    else:
+        match procedure.form(used, used.estimator(focus.L)):
+            case Diagonal():
+                fits = True
+            case Banded() as form:
+                fits = len(form.lag_weights) == 1 or _in_row_order(plain, correlation)
+            case Grouped() as form:
+                fits = not new and (_within(plain, correlation, form.codes) or form.codes.max() < MOST_DIRECTIONS)
+            case Squares() as form:
+                fits = not new and form.rows.shape[1] <= MOST_DIRECTIONS
+            case _:
+                fits = False
+    return None if fits else f"{design.n} rows are too many for this variance estimate with these errors"
+
+
+def _in_row_order(plain: bool, correlation: Correlation | None) -> bool:
+    """Whether errors are independent or follow chains in the order of the rows."""
+    return plain or (isinstance(correlation, Chain) and correlation.contiguous)
+
+
+def _within(plain: bool, correlation: Correlation | None, codes: Ints) -> bool:
+    """Whether no correlation reaches from one group to another."""
+    if plain:
+        return True
+    if isinstance(correlation, Shared):
+        return bool(np.array_equal(correlation.codes, codes))
+    if isinstance(correlation, Chain):
+        ordered = codes[correlation.order]
+        return bool(np.all((correlation.links[1:] == 0.0) | (ordered[1:] == ordered[:-1])))
+    return False
