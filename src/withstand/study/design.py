@@ -76,14 +76,15 @@ class Design:
         n, p = self.X.shape
         if n <= p:
             raise DesignError(
-                f"{n} rows cannot carry a model with {p} columns ({', '.join(self.names)})",
+                f"{n} rows cannot carry a model with {p} columns ({_listed(self.names)})",
                 remedy="Collect more rows or drop terms; at least one residual degree of freedom is needed.",
             )
         short = np.abs(np.diag(self.R)) <= RANK_TOLERANCE * np.linalg.norm(self.X, axis=0)
         if short.any():
+            place = int(np.argmax(short))
             raise DesignError(
-                f"the model matrix has rank below {p}: column '{self.names[int(np.argmax(short))]}' is a combination of the "
-                f"columns before it ({', '.join(self.names[: int(np.argmax(short))])})",
+                f"the model matrix has rank below {p}: column '{self.names[place]}' is a combination of the columns before it "
+                f"({_listed(self.names[:place])})",
                 remedy="Drop one of the terms involved; an empty cell of an interaction has the same effect.",
             )
 
@@ -191,3 +192,9 @@ class Design:
             groups=groups,
             weights=None if self.weights is None else self.weights[index],
         )
+
+
+def _listed(names: tuple[str, ...]) -> str:
+    """Names for a message, not more than can be read."""
+    more = f" and {len(names) - 12} more" if len(names) > 12 else ""
+    return ", ".join(names[:12]) + more

@@ -7,15 +7,15 @@ from __future__ import annotations
 
 import re
 from abc import ABC, abstractmethod
-from collections.abc import Callable
 from dataclasses import dataclass, replace
 from typing import ClassVar
 
 import numpy as np
 
-from withstand.errors import DesignError, ScenarioError, nearest
+from withstand.errors import ScenarioError, nearest
 from withstand.study.design import Design, Ints
-from withstand.study.study import FixedRows, Study
+from withstand.study.rows import DrawnRows, FixedRows
+from withstand.study.study import Study
 
 COPIES = (
     "Copies share leverage out: c copies divide every leverage by c and bring no farther point, as real rows would from "
@@ -114,41 +114,6 @@ class Stack(Growth):
         cells = [factor.codes for factor in design.factors.values()]
         ranked = np.lexsort([fitted, *cells])
         return np.sort(_evenly(ranked, rest))
-
-
-@dataclass(frozen=True, eq=False)
-class DrawnRows:
-    """N rows drawn with replacement from a design, in every block others.
-
-    Parameters
-    ----------
-    design : Design
-        Where they come from.
-    n : int
-        How many.
-    """
-
-    design: Design
-    n: int
-    fixed: bool = False
-
-    def draw(self, generator: np.random.Generator) -> Design:
-        """Rows, or whole groups until there are n rows; draws that cannot carry the model are drawn again."""
-        return full_rank_draw(lambda: self._draw(generator))
-
-    def _draw(self, generator: np.random.Generator) -> Design:
-        groups = self.design.groups
-        if groups is None:
-            return self.design.rows(np.sort(generator.integers(0, self.design.n, self.n)))
-        members = [np.flatnonzero(groups == group) for group in range(self.design.group_count)]
-        index: list[Ints] = []
-        labels: list[Ints] = []
-        while sum(map(len, index)) < self.n:
-            chosen = members[int(generator.integers(0, len(members)))]
-            labels.append(np.full(len(chosen), len(index)))
-            index.append(chosen)
-        drawn = self.design.rows(np.concatenate(index)[: self.n])
-        return replace(drawn, groups=np.concatenate(labels)[: self.n].astype(np.int64))
 
 
 @dataclass(frozen=True, eq=False)
@@ -300,30 +265,6 @@ def growth_of(study: Study, rule: str | None = None) -> Growth:
     if rule not in RULES:
         raise ScenarioError(f"unknown growth '{rule}'", where="growth", remedy=nearest(rule, RULES))
     return RULES[rule](study)
-
-
-ATTEMPTS = 100
-"""Draws of a design before giving up on one that carries the model."""
-
-
-def full_rank_draw(draw: Callable[[], Design]) -> Design:
-    """The first of several draws that carries the model.
-
-    Raises
-    ------
-    ScenarioError
-        If none of ATTEMPTS does.
-    """
-    for _ in range(ATTEMPTS):
-        try:
-            return draw()
-        except DesignError as error:
-            last = error
-    raise ScenarioError(
-        f"in {ATTEMPTS} draws no table carried the model; the last time, {last.what}",
-        where="rows",
-        remedy="Ask for more rows, or drop terms whose levels are rare.",
-    )
 
 
 def _evenly(ranked: Ints, count: int) -> Ints:

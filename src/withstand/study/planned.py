@@ -4,23 +4,16 @@ from __future__ import annotations
 
 import hashlib
 import math
-from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field, replace
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 from functools import cached_property
 from types import MappingProxyType
 from typing import Literal
 
-import numpy as np
-import pandas as pd
-
-from withstand.errors import InputError, ScenarioError, nearest
+from withstand.errors import ScenarioError
 from withstand.study.columns import Blocks, Drawn, InSequence, Levels, PlannedColumn, Shares
-from withstand.study.design import Design, Floats
-from withstand.study.focus import Focus
-from withstand.study.growth import full_rank_draw
 from withstand.study.layout import Layout
 from withstand.study.pilot import Pilot
-from withstand.study.study import FixedRows, Study
 
 __all__ = [
     "Blocks",

@@ -2,58 +2,18 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
-from typing import Protocol
+from typing import Any, Literal, Self
 
 import numpy as np
+import pandas as pd
 
+from withstand.study.build import fields_from_frame, fields_from_results
 from withstand.study.design import Design, Floats
 from withstand.study.focus import Focus
-
-
-class Rows(Protocol):
-    """Where the rows of a replicate come from."""
-
-    @property
-    def fixed(self) -> bool:
-        """True when every block has the study's own design."""
-
-    def draw(self, generator: np.random.Generator) -> Design:
-        """A design for one block."""
-
-
-@dataclass(frozen=True, eq=False)
-class FixedRows:
-    """The rows as they are, in every block: conclusions are conditional on them."""
-
-    design: Design
-    fixed: bool = True
-
-    def draw(self, generator: np.random.Generator) -> Design:
-        """The study's own design; nothing is drawn."""
-        return self.design
-
-
-@dataclass(frozen=True)
-class Account:
-    """Where the rows of the table went.
-
-    Parameters
-    ----------
-    read : int
-        Data rows in the table.
-    dropped : mapping of str to int
-        Rows dropped for a missing value, by the first column that lacks one.
-    """
-
-    read: int
-    dropped: Mapping[str, int] = field(default_factory=dict)
-
-    @property
-    def used(self) -> int:
-        """Rows in the analysis."""
-        return self.read - sum(self.dropped.values())
+from withstand.study.focusing import Effect, FocusEntry
+from withstand.study.rows import Account, Rows
 
 
 @dataclass(frozen=True, eq=False)
@@ -84,6 +44,10 @@ class Study:
         What was read and dropped.
     notices : tuple of str
         What the user should know about how the table was read.
+    labels : tuple of str, length n
+        What the user calls each row, in the order of the design's rows; empty for a plan.
+    roles : mapping of str to str
+        Names of the columns that give order, groups and weights, by role.
     digest : str
         Hash of everything above that can change a result.
     grow : callable, optional
@@ -101,8 +65,90 @@ class Study:
     level: float = 0.95
     account: Account | None = None
     notices: tuple[str, ...] = ()
+    labels: tuple[str, ...] = ()
+    roles: Mapping[str, str] = field(default_factory=dict)
     digest: str = ""
     grow: Callable[[int], Study] | None = None
+
+    @classmethod
+    def from_frame(
+        cls,
+        frame: pd.DataFrame,
+        formula: str,
+        *,
+        focus: FocusEntry | Sequence[FocusEntry] = (),
+        order: str | None = None,
+        groups: str | None = None,
+        weights: str | None = None,
+        level: float = 0.95,
+        rows: Literal["fixed", "resampled"] = "fixed",
+        effect: Mapping[str, Effect] | None = None,
+        name: str = "",
+    ) -> Self:
+        """A study of a table.
+
+        Parameters
+        ----------
+        frame : DataFrame
+            One row an observation. It is not changed.
+        formula : str
+            Model, such as "y ~ a + b".
+        focus : str, mapping, or sequence of them
+            What the decision hangs on: coefficients, terms, contrasts ("g[a] - g[b]"), or points ({"at": {...}, "of": "mean"
+            or "new"}). Left out: every term of the model.
+        order : str, optional
+            Column with the order in time, numbers or dates.
+        groups : str, optional
+            Column with the clusters.
+        weights : str, optional
+            Column with known weights, proportional to reciprocals of the error variance.
+        level : float
+            Confidence level, in (0, 1); tests are at 1 - level.
+        rows : {"fixed", "resampled"}
+            The rows as they are, or drawn with replacement in each block of replicates.
+        effect : mapping of str to float or sequence of float, optional
+            The smallest effect that matters, by entry of the focus, in its own unit.
+        name : str
+            Title.
+
+        Raises
+        ------
+        InputError
+            If the table, the formula, the focus or the model matrix cannot be used; the message says where and how to mend it.
+        """
+        return cls(
+            **fields_from_frame(
+                frame,
+                formula,
+                focus=focus,
+                order=order,
+                groups=groups,
+                weights=weights,
+                level=level,
+                rows=rows,
+                effect=effect,
+                name=name,
+            )
+        )
+
+    @classmethod
+    def from_results(cls, results: Any, **options: Any) -> Self:
+        """A study of a model that was fitted with statsmodels.
+
+        Parameters
+        ----------
+        results : RegressionResults
+            Of an OLS or WLS fit, made with or without a formula. The weights of a WLS fit are its known weights.
+        **options
+            focus, order, groups, level, rows, effect and name, as for `from_frame`; `order` and `groups` name columns of the
+            frame the model was fitted to.
+
+        Raises
+        ------
+        InputError
+            If the fit is of another kind, or its repetition here gives other fitted values.
+        """
+        return cls(**fields_from_results(results, **options))
 
     @property
     def n(self) -> int:
