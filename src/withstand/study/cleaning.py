@@ -197,7 +197,8 @@ def _positions(column: pd.Series, name: str) -> np.ndarray:
     numbers = as_numbers(column.astype(str).str.strip())
     if numbers is not None:
         return numbers.to_numpy()
-    dates = pd.to_datetime(column.astype(object), errors="coerce", format="ISO8601")
+    text = column.map(lambda cell: cell.isoformat() if hasattr(cell, "isoformat") else str(cell).strip())
+    dates = pd.to_datetime(text, errors="coerce", format="ISO8601")
     if dates.isna().any():
         row = column.index[int(np.argmax(dates.isna()))]
         raise TableError(
