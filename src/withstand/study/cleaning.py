@@ -10,7 +10,7 @@ import pandas as pd
 
 from withstand.errors import TableError, nearest
 from withstand.study.formula import Formula
-from withstand.study.numerals import as_numbers, refuse_text_among_numbers
+from withstand.study.numerals import as_numbers, looks_numeric, refuse_text_among_numbers
 from withstand.study.rows import Account
 from withstand.study.table import NOTICES, check_names
 
@@ -200,9 +200,11 @@ def _positions(column: pd.Series, name: str) -> np.ndarray:
     text = column.map(lambda cell: cell.isoformat() if hasattr(cell, "isoformat") else str(cell).strip())
     dates = pd.to_datetime(text, errors="coerce", format="ISO8601")
     if dates.isna().any():
-        row = column.index[int(np.argmax(dates.isna()))]
+        # Among numbers the text is at fault, among dates what is no date.
+        wrong = ~looks_numeric(text) if looks_numeric(text).any() else dates.isna()
+        row = column.index[int(np.argmax(wrong))]
         raise TableError(
-            f"'{column.loc[row] if column.index.is_unique else row}' is neither a number nor a date such as 2031-04-09",
+            f"'{text.iloc[int(np.argmax(wrong))]}' is neither a number nor a date such as 2031-04-09",
             where=f"row {row}, column '{name}'",
             remedy="Give the order as numbers or as year-month-day.",
         )
