@@ -7,7 +7,7 @@ import withstand
 
 ORDER = [
     "errors", "study", "departures", "procedures", "diagnostics", "exact", "engine", "measures", "judgement", "lab", "report",
-    "scenario", "cli",
+    "scenario", "front", "cli",
 ]  # fmt: skip
 ROOT = Path(withstand.__file__).parent
 

@@ -8,6 +8,8 @@ from __future__ import annotations
 from importlib import import_module
 from typing import Any
 
+__version__ = "0.1.0"
+
 _HOME = {
     "Bowtie": "departures",
     "Clusters": "departures",
@@ -20,11 +22,11 @@ _HOME = {
     "Outliers": "departures",
     "PowerSpread": "departures",
     "Pretest": "diagnostics",
-    "Result": "report",
+    "Result": "report.result",
     "Serial": "departures",
     "Skew": "departures",
-    "Study": "study",
-    "Tolerance": "judgement",
+    "Study": "study.study",
+    "Tolerance": "judgement.tolerance",
     "WithstandError": "errors",
     "WorstFan": "departures",
     "inspect": "front",

@@ -31,7 +31,8 @@ from withstand.engine.tally import Feature
 from withstand.procedures import make_procedure
 from withstand.study.design import Design
 from withstand.study.focus import Focus
-from withstand.study.study import FixedRows, Study
+from withstand.study.rows import FixedRows
+from withstand.study.study import Study
 
 ROUNDS = 7
 SHAPES = ((100, 5), (24, 3), (400, 8))

@@ -36,7 +36,8 @@ from withstand.procedures.classical import Ols
 from withstand.procedures.sandwich import Hc0, Hc1, Hc2, Hc2Bm, Hc3
 from withstand.study.design import Design, Factor
 from withstand.study.focus import Focus, FocusKind, Point
-from withstand.study.study import FixedRows, Study
+from withstand.study.rows import FixedRows
+from withstand.study.study import Study
 
 ALPHA, DELTA = 0.05, 0.01
 LOOKS = Looks(10_000, 160_000)

@@ -6,7 +6,8 @@ from withstand.engine.job import Job
 from withstand.procedures.base import make_procedure
 from withstand.study.design import Design
 from withstand.study.focus import Focus
-from withstand.study.study import FixedRows, Study
+from withstand.study.rows import FixedRows
+from withstand.study.study import Study
 
 
 def make_study(n=24, p=3, seed=5, effect=0.8):

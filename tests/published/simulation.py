@@ -9,7 +9,8 @@ from withstand.measures.compute import MEASURES, measure
 from withstand.procedures.base import make_procedure
 from withstand.study.design import Design, Factor
 from withstand.study.focus import Focus, FocusKind
-from withstand.study.study import FixedRows, Study
+from withstand.study.rows import FixedRows
+from withstand.study.study import Study
 
 ALLOWED = 4.5
 """Monte Carlo standard errors allowed: one false alarm in 150,000 checks of a true value."""

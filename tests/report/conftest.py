@@ -26,6 +26,11 @@ def _figure(kind, severity):
     return f"{1 / severity:g}" if kind == "heavy-tails" else f"{severity:g}"
 
 
+def _shown(kind, along, stack):
+    by = {"clusters": " by charge", "serial": " along run_no"}.get(kind, f" along {along}" if along else "")
+    return f"{kind}{by}{f' with {stack}' if stack else ''}"
+
+
 def _rows(n, where, procedure, focus, coverage, base, exact, repetitions, failures, effect):
     def row(measure, value, se, low, high, shift):
         return {
@@ -109,8 +114,8 @@ def build(
                 point = first if exact else (first + last) / 2
                 tipping.append(
                     {
-                        "departure": kind, "along": along, "procedure": procedure, "focus": shown, "tipping": point,
-                        "last_holds": first if exact else last, "first_gives": first, "plausible_low": low,
+                        "departure": kind, "along": along, "stack": stack, "procedure": procedure, "focus": shown,
+                        "tipping": point, "last_holds": first if exact else last, "first_gives": first, "plausible_low": low,
                         "plausible_high": high, "observed": math.nan if planned else 0.7,
                         "detectability_at_tipping": min(0.97, 0.1 + 0.2 * len(worst)) if gives else math.nan,
                     }
@@ -127,7 +132,7 @@ def build(
                         "method": "exact" if exact else "simulated", "verdict_there": verdict,
                         "cure": "no cure" if kind in ("clusters", "serial", "fan") else "fades with rows",
                         "limit": 0.62 if kind == "clusters" else math.nan, "holding_procedure": holding,
-                        "premium": WIDTH.get(holding, math.nan),
+                        "premium": WIDTH.get(holding, math.nan) - 1.0,
                     }
                 )  # fmt: skip
         ranking += sorted(worst, key=lambda row: row["shift_there"])
@@ -146,6 +151,10 @@ def build(
                 {"name": "Intercept", "estimate": 2.5, "se": 0.4}, {"name": "dry_hours", "estimate": 0.043, "se": 0.01},
             ],
             "rows_mode": "fixed",
+            "axes": [
+                {"departure": kind, "along": along, "stack": stack, "name": _shown(kind, along, stack)}
+                for kind, along, stack, *_ in departures
+            ],
             "focus": [
                 {
                     "name": names.get(focus, focus), "kind": "coefficient", "estimate": 0.043, "low": 0.022, "high": 0.064,

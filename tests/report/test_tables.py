@@ -106,10 +106,47 @@ def test_where_it_turns(rich, changes, told):
 
 
 def test_tipping_of_a_departure_alone_is_not_taken_for_a_stack(rich):
-    tipping = rich.tipping[rich.tipping["departure"] == "fan"].assign(along="fitted")
-    alone = rich.measures.query("stack == '' and departure == 'fan'").assign(along="fitted")
-    view = View(dataclasses.replace(rich, tipping=tipping, measures=pd.concat([rich.measures, alone])))
+    alone = rich.tipping[rich.tipping["departure"] == "fan"].assign(along="fitted", stack="")
+    view = View(dataclasses.replace(rich, tipping=alone))
     assert view.tipping(Axis("fan", "fitted", ""), "ols", "dry_hours") is not None
     assert view.tipping(Axis("fan", "fitted", "skew skewness 1"), "ols", "dry_hours") is None
-    own = dataclasses.replace(rich, tipping=tipping.assign(stack="skew skewness 1"))
+    own = dataclasses.replace(rich, tipping=alone.assign(stack="skew skewness 1"))
     assert View(own).tipping(Axis("fan", "fitted", "skew skewness 1"), "ols", "dry_hours") is not None
+
+
+@pytest.mark.parametrize(
+    ("changes", "told"),
+    [
+        ({"tipping": 0.91, "last_holds": 0.91, "first_gives": 0.91}, "gives from SD ratio 0.91 down"),
+        ({"tipping": 0.7, "last_holds": 0.8, "first_gives": 0.6}, "gives between SD ratio 0.8 and SD ratio 0.6"),
+        ({"tipping": math.nan, "last_holds": 0.6, "first_gives": math.nan}, "holds down to SD ratio 0.6, unsettled beyond"),
+        ({"tipping": 1.0, "last_holds": math.nan, "first_gives": 1.0}, "gives even when nothing is wrong"),
+    ],
+)
+def test_where_a_departure_turned_round_turns(rich, changes, told):
+    turned = rich.measures.query("departure == 'fan' and along == 'dry_hours' and severity == 2").assign(
+        severity=0.5, severity_label="SD ratio 0.5"
+    )
+    outcome = dataclasses.replace(
+        rich, tipping=rich.tipping.assign(**changes), measures=pd.concat([rich.measures, turned])
+    )
+    assert turning(View(outcome), Axis("fan", "dry_hours", ""), "ols", "dry_hours") == told
+
+
+@pytest.mark.parametrize(
+    ("low", "high", "told"),
+    [
+        (0.6, 2.1, "SD ratio 0.6 to 2.1"),
+        (-math.inf, 2.1, "SD ratio 2.1 or less"),
+        (0.6, math.inf, "SD ratio 0.6 or more"),
+        (-math.inf, math.inf, "any that was tried"),
+        (math.nan, math.nan, "none that was tried"),
+    ],
+)
+def test_what_the_residuals_allow(rich, low, high, told):
+    view = View(dataclasses.replace(rich, tipping=rich.tipping.assign(plausible_low=low, plausible_high=high)))
+    assert allowed(view, Axis("fan", "dry_hours", ""), "ols", "dry_hours") == told
+
+
+def test_a_study_without_data_says_nothing_of_residuals(planned):
+    assert allowed(View(planned), Axis("fan", "dry_hours", ""), "ols", "dry_hours") == ""

@@ -7,15 +7,16 @@ from typing import Any
 
 import click
 
-from withstand.cli.options import with_effort, with_input, with_place, with_speech
+from withstand import __version__
+from withstand.cli.options import with_effort, with_folder, with_input, with_place, with_speech
 from withstand.cli.state import State
 
 LISTS = ("departures", "procedures", "measures", "tolerances")
-DEMOS = ("kiln_boards", "reservoir")
+DEMOS = ("kiln_boards", "reservoir", "lamp_trial")
 
 
 @click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
-@click.version_option(package_name="withstand", message="%(package)s %(version)s")
+@click.version_option(__version__, prog_name="withstand", message="%(prog)s %(version)s")
 @click.option("--debug", is_flag=True, help="Show where an error came from.")
 @click.pass_obj
 def withstand(state: State, debug: bool) -> None:
@@ -49,6 +50,32 @@ def inspect(state: State, **options: Any) -> None:
     from withstand.cli.running import inspect_input
 
     inspect_input(state, **options)
+
+
+@withstand.command()
+@with_input
+@with_effort
+@click.option("--departure", "departures", metavar="KIND", multiple=True, help="What may be wrong; as often as needed.")
+@click.option("--severity", "severities", metavar="NUMBER", type=float, multiple=True, help="One for each --departure.")
+@click.option("--along", metavar="COL", help="The column along which the spread or the mean departs.")
+@click.option("--together", is_flag=True, help="The departures act at once, as a stack, rather than each alone.")
+@click.option("--procedure", "procedures", metavar="NAME", multiple=True, help="One, or several to find the cheapest.")
+@click.option("--power", type=float, help="Power at the smallest effect that matters, such as 0.9.")
+@click.option("--half-width", type=float, help="Largest mean half width of the interval.")
+@click.option("--only", is_flag=True, help="Only --power and --half-width: coverage and bias need not be within tolerance.")
+@click.option("--range", "ranges", metavar="NAME=A,B", multiple=True, help="An uncertain input, such as error_sd=2,4.")
+@click.option("--at", metavar="ROWS", type=int, multiple=True, help="Say what so many rows are good for, instead.")
+@click.option("--on", metavar="TERM", help="The focal quantity; the first if left out.")
+@click.option("--growth", type=click.Choice(["stack", "resample", "extend"]), help="How the rows of a table multiply.")
+@click.option("--largest", type=click.IntRange(4), default=20_000, help="The largest number of rows tried; 20,000.")
+@with_folder
+@with_speech
+@click.pass_obj
+def size(state: State, **options: Any) -> None:
+    """Find the number of rows at which everything asked for is met."""
+    from withstand.cli.sizing import size_input
+
+    size_input(state, **options)
 
 
 @withstand.command()

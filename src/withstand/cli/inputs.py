@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -11,7 +12,7 @@ from typing import Any
 import click
 
 from withstand.scenario.load import Loaded, load, load_scenario
-from withstand.scenario.source import KeyPath, Source
+from withstand.scenario.source import Complaint, KeyPath, Source
 
 _STUDY = ("model", "focus", "order", "groups", "weights", "effect", "level", "rows")
 _ENDINGS = (".gz", ".csv", ".tsv", ".txt", ".parquet", ".xlsx")
@@ -25,6 +26,12 @@ class CommandLine(Source):
         """The option that gave a value."""
         key = str(path[1]) if len(path) > 1 else ""
         return self.name if key in ("", "data") else f"--{key}"
+
+    def relocate(self, error: Complaint, entry: KeyPath = ()) -> Complaint:
+        """The same complaint with its place and its remedy in options, where they speak of keys."""
+        found = super().relocate(error, entry)
+        remedy = re.sub(rf"\b({'|'.join([*_STUDY, 'decimal'])}) = ", r"--\1 ", found.remedy)
+        return type(found)(found.what, where=found.where, remedy=remedy)
 
 
 def loaded_from(input_path: Path, options: Mapping[str, Any]) -> Loaded:

@@ -29,9 +29,12 @@ _EFFORT = [
     click.option("--method", type=click.Choice(["auto", "simulated"]), help="Exact answers where there are any, or none."),
 ]
 
-_WHERE = [
+_FOLDER = [
     click.option("--out", metavar="DIR", type=click.Path(path_type=Path), help="Folder for results; outputs/NAME if left out."),
     click.option("--workers", type=click.IntRange(1), help="Worker processes; the number of cores, up to 8, if left out."),
+]
+
+_FURTHER = [
     click.option("--cluster", metavar="ADDRESS", help="Address of a Dask scheduler, instead of worker processes."),
     click.option("--fresh", is_flag=True, help="Forget what an earlier run left in the folder."),
     click.option("--verify", is_flag=True, help="Simulate what has exact answers as well, and compare."),
@@ -53,9 +56,14 @@ def with_effort(command: Command) -> Command:
     return _with(_EFFORT, command)
 
 
+def with_folder(command: Command) -> Command:
+    """Where to leave the results, and how many processes to use."""
+    return _with(_FOLDER, command)
+
+
 def with_place(command: Command) -> Command:
-    """Where to compute and where to leave the results."""
-    return _with(_WHERE, command)
+    """The same, with what concerns a run that is kept."""
+    return _with([*_FOLDER, *_FURTHER], command)
 
 
 def with_speech(command: Command) -> Command:

@@ -11,7 +11,7 @@ from withstand.departures.world import Disturbance, World
 from withstand.engine.job import Job
 from withstand.engine.noise import BlockNoise, design_generator
 from withstand.engine.tally import FEATURES, Questions, Tally, record, record_failure
-from withstand.procedures.base import Fitter, Procedure
+from withstand.procedures.base import Answer, Fitter, Procedure
 from withstand.procedures.fit import Fit
 from withstand.procedures.sample import Sample
 from withstand.study.design import Design, Floats
@@ -204,7 +204,7 @@ class Kernel:
             truth = truth + study.error_sd * truths[j]
             sized = powered = None
             null = alternative = None
-            if focus.kind is not FocusKind.NEW:
+            if focus.kind is not FocusKind.NEW and Answer.TEST in ready.procedure.answers(focus):
                 shift = study.error_sd * disturbance.target_shift(focus)
                 null = alternative = focus.null
                 sized = ready.fitter(self._at(sample, self._moved(focus, focus.null - shift)))[position]

@@ -62,27 +62,43 @@ class Ledger:
         self._where = "ledger" if path is None else str(path)
         try:
             self._db = sqlite3.connect(":memory:" if path is None else path, isolation_level=None)
+        except sqlite3.Error as error:
+            raise self._unreadable(error) from error
+        try:
+            # Looked at before anything is changed, the journal's mode included: it may be someone else's database.
+            self._refuse_foreign()
             self._db.execute("PRAGMA journal_mode=WAL")
-            names = {row[0] for row in self._db.execute("SELECT name FROM sqlite_master WHERE type = 'table'")}
-            if names and not {"about", "tallies"} <= names:
-                raise LedgerError(
-                    "this SQLite file is not a ledger of withstand", where=self._where, remedy="Give another folder with --out."
-                )
             self._db.executescript(_SCHEMA)
             self._db.execute("INSERT OR IGNORE INTO about VALUES ('format', ?)", (_FORMAT,))
-            found = self._db.execute("SELECT value FROM about WHERE key = 'format'").fetchone()[0]
-        except sqlite3.DatabaseError as error:
+        except sqlite3.Error as error:
+            self._db.close()
+            raise self._unreadable(error) from error
+        except LedgerError:
+            self._db.close()
+            raise
+
+    def _refuse_foreign(self) -> None:
+        names = {row[0] for row in self._db.execute("SELECT name FROM sqlite_master WHERE type = 'table'")}
+        if not names:
+            return
+        if not {"about", "tallies"} <= names:
             raise LedgerError(
-                f"the ledger cannot be read ({error})",
-                where=self._where,
-                remedy="If it is damaged, start over with --fresh; check that the folder can be written to.",
-            ) from error
-        if found != _FORMAT:
+                "this SQLite file is not a ledger of withstand", where=self._where, remedy="Give another folder with --out."
+            )
+        found = self._db.execute("SELECT value FROM about WHERE key = 'format'").fetchone()
+        if found is not None and found[0] != _FORMAT:
             raise LedgerError(
-                f"the ledger has format {found}, this version reads {_FORMAT}",
+                f"the ledger has format {found[0]}, this version reads {_FORMAT}",
                 where=self._where,
                 remedy="Start over with --fresh or give another folder with --out.",
             )
+
+    def _unreadable(self, error: sqlite3.Error) -> LedgerError:
+        return LedgerError(
+            f"the ledger cannot be read ({error})",
+            where=self._where,
+            remedy="If it is damaged, start over with --fresh; check that the folder can be written to.",
+        )
 
     def claim(self, owner: str) -> None:
         """Tie the ledger to one study.

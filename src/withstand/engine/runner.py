@@ -43,7 +43,7 @@ class Runner:
         """Where a cell stands in the ledger."""
         world, procedure = cell
         name = "none" if world == BASELINE else self.job.worlds[world].key
-        return self.job.digest, name, self.job.procedures[procedure].identity
+        return self.job.digest, name, self.job.procedures[procedure].key
 
     def read(self, cell: CellKey) -> Entry:
         """What the ledger holds of a cell."""

@@ -1,10 +1,22 @@
-r"""P(Q > 0) for Q = |w|^2 - c^2 V by integrating the moment generating function along a line beside the imaginary axis.
+r"""P(Q > 0) for Q = |w|^2 - c^2 V by integrating the moment generating function along a path beside the imaginary axis.
 
     P(Q > 0) = 1/(2 pi i) * integral over Re s = c > 0 of E[exp(s Q)] / s ds;   over Re s = c < 0 it gives -P(Q < 0).
 
 Any c at which E[exp(c Q)] exists gives the same value; near the saddle point of the integrand it is a sum of terms no larger
 than the answer, so that small probabilities keep their leading digits (Rice 1980, SIAM J. Sci. Stat. Comput. 1:438; Lugannani
-& Rice 1980). With s = c + i h sinh(x) the sum over equally spaced x converges geometrically.
+& Rice 1980).
+
+The integrand is analytic off the real axis: E[exp(s Q)] is singular where 2 s is a reciprocal eigenvalue of Sigma times the
+matrix of Q, and these are real. So the line may be bent into the branch of a hyperbola
+
+    s = c + h (sin(phi) (cosh x - 1) + i cos(phi) sinh x),
+
+on which the sum over equally spaced x converges geometrically. With many rows V hardly varies, so along the line the integrand
+turns many times before it has decayed; bent to the right (phi > 0) it decays like exp(-s c^2 V) instead.
+
+The logarithms need no unwrapping on the bent path either: with P(theta) the tilted precision of w, theta = 2 c^2 s, the
+imaginary part of P(theta)/theta is negative definite for Im s > 0 (P is a matrix-valued complete Bernstein function), so all
+pivots of P - 2 s I have arguments between arg(s) - pi and arg(s).
 """
 
 from __future__ import annotations
@@ -22,6 +34,13 @@ from withstand.study.design import Floats
 
 WANTED = 1e-8
 """Largest accepted absolute error of a probability."""
+
+_WIDTH = 0.8
+"""Scale of a path in units of the width of the saddle."""
+
+_BENDS = np.array([-0.25, -0.125, 0.0, 0.125, 0.25]) * np.pi
+_LOOKS = np.array([1.0, 2.0, 3.0, 4.0])
+"""Bends among which a path is chosen, and the x at which they are compared."""
 
 _STEP = 0.5
 _BLOCK = 8
@@ -68,7 +87,8 @@ class Inverter:
         self.problem = problem
         self.structure = structure_of(problem) if structure is None else structure
         self.variance = self._variance()
-        self._lines: dict[tuple[float, float], _Line] = {}
+        self._paths: dict[tuple[float, float, float], _Path] = {}
+        self._trials: dict[tuple[float, float], tuple[Values, Values, Tilt]] = {}
         self._grid, self._grid_tilt = self._candidates()
 
     def _variance(self) -> float:
@@ -120,7 +140,7 @@ class Inverter:
         best = np.argmin(flat, axis=1)
         for index in np.unique(best):
             chosen = best == index
-            values[:, chosen], error[chosen] = self._line(float(self._grid[index]), d[chosen]).integrate(d[chosen], sides)
+            values[:, chosen], error[chosen] = self._path(float(self._grid[index]), d[chosen]).integrate(d[chosen], sides)
         if not np.all(error <= WANTED):
             raise NumericalError(
                 f"an exact probability was reached to {np.nanmax(error):.1e} only, with {WANTED:.0e} wanted "
@@ -136,24 +156,37 @@ class Inverter:
         above = np.clip(values[2] + np.where(negative, ndtr(mean), 0.0), 0.0, 1.0)
         return Probabilities(beyond, within, below, above, error)
 
-    def _line(self, c: float, d: Floats) -> _Line:
-        """The line through c, with a scale that fits the curvature of the integrand there."""
+    def _path(self, c: float, d: Floats) -> _Path:
+        """The path through c, with a scale that fits the curvature of the integrand there, bent to where it falls fastest."""
         aside = np.array([c, c + 0.1j * abs(c)])
         fall = np.diff(self._log_mgf(self.tilt(aside), aside, d).real, axis=1)
         curvature = np.max(-2.0 * fall / (0.1 * c) ** 2 + 1.0 / c**2)
-        # A power of two times c, so that effects of similar size share a line.
-        scale = abs(c) * float(np.exp2(np.floor(np.log2(0.8 / (abs(c) * np.sqrt(curvature))))))
-        if (c, scale) not in self._lines:
-            self._lines[c, scale] = _Line(self, c, scale)
-        return self._lines[c, scale]
+        # A power of two times c, so that effects of similar size share a path.
+        scale = abs(c) * float(np.exp2(np.floor(np.log2(_WIDTH / (abs(c) * np.sqrt(curvature))))))
+        if (c, scale) not in self._trials:
+            s, weights = _hyperbola(c, scale, _BENDS[:, None], _LOOKS[None, :])
+            self._trials[c, scale] = s.ravel(), weights.ravel(), self.tilt(s.ravel())
+        s, weights, found = self._trials[c, scale]
+        log_moduli = self._log_mgf(found, s, d).real + np.log(np.abs(weights / s))
+        heights = log_moduli.max(axis=0).reshape(len(_BENDS), len(_LOOKS))
+        bend = float(_BENDS[np.argmin(np.logaddexp.reduce(np.where(np.isnan(heights), np.inf, heights), axis=1))])
+        if (c, scale, bend) not in self._paths:
+            self._paths[c, scale, bend] = _Path(self, c, scale, bend)
+        return self._paths[c, scale, bend]
 
 
-class _Line:
-    """Nodes on one line Re s = c, computed block by block and level by level."""
+def _hyperbola(c: float, scale: float, bend: Floats | float, x: Floats) -> tuple[Values, Values]:
+    """Points s(x) of a path and their weights s'(x)/i."""
+    s = c + scale * (np.sin(bend) * (np.cosh(x) - 1.0) + 1j * np.cos(bend) * np.sinh(x))
+    return s, scale * (np.cos(bend) * np.cosh(x) - 1j * np.sin(bend) * np.sinh(x))
 
-    def __init__(self, inverter: Inverter, c: float, scale: float) -> None:
-        self._inverter, self._c, self._scale = inverter, c, scale
-        self._nodes: dict[tuple[int, int], tuple[Values, Floats, Tilt]] = {}
+
+class _Path:
+    """Nodes on one path, computed block by block and level by level."""
+
+    def __init__(self, inverter: Inverter, c: float, scale: float, bend: float) -> None:
+        self._inverter, self._c, self._scale, self._bend = inverter, c, scale, bend
+        self._nodes: dict[tuple[int, int], tuple[Values, Values, Tilt]] = {}
 
     def integrate(self, d: Floats, sides: bool) -> tuple[Floats, Floats]:
         """Integrals of the whole and of its two sides, (3, E), and the error, (E,)."""
@@ -199,13 +232,12 @@ class _Line:
         moduli = np.abs(whole)
         return result, moduli.sum(axis=1), moduli[:, -1]
 
-    def _at(self, level: int, block: int) -> tuple[Values, Floats, Tilt]:
+    def _at(self, level: int, block: int) -> tuple[Values, Values, Tilt]:
         if (level, block) not in self._nodes:
             step = _STEP / 2.0**level
             inner = np.arange(_BLOCK) if level == 0 else np.arange(1.0, _BLOCK * 2.0**level, 2.0)
             x = block * _BLOCK * _STEP + inner * step
-            s = self._c + 1j * self._scale * np.sinh(x)
-            weight = self._scale * np.cosh(x)
+            s, weight = _hyperbola(self._c, self._scale, self._bend, x)
             if level == 0 and block == 0:
                 weight[0] *= 0.5
             self._nodes[level, block] = s, weight, self._inverter.tilt(s)

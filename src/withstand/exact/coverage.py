@@ -29,7 +29,7 @@ class ExactResult:
     miss_below, miss_above : float or None
         Probability that the whole interval lies below, and above, the true value; None for a joint quantity.
     width : float or None
-        Expected width, in error SDs; None for a joint quantity.
+        Expected width, in error SDs; None for a joint quantity, or where it was not wanted.
     error : float
         Bound on the absolute error of each probability, from the convergence of the sums and rounding.
     """
@@ -43,7 +43,13 @@ class ExactResult:
 
 
 def coverage(
-    procedure: LinearProcedure, design: Design, focus: Focus, disturbance: Disturbance, level: float
+    procedure: LinearProcedure,
+    design: Design,
+    focus: Focus,
+    disturbance: Disturbance,
+    level: float,
+    *,
+    width: bool = True,
 ) -> ExactResult:
     """Coverage under normal errors with any mean shift and covariance.
 
@@ -59,6 +65,8 @@ def coverage(
         A world realised on the design.
     level : float
         Confidence level.
+    width : bool
+        Whether the expected width is wanted; it takes an integral of its own.
 
     Returns
     -------
@@ -80,15 +88,15 @@ def coverage(
     inverter = Inverter(problem)
     scalar = focus.scalar
     found = inverter.probabilities(np.zeros((1, problem.k)), sides=scalar)
-    width = None
-    if scalar:
+    length = None
+    if scalar and width:
         root = expected_root(problem, inverter.structure, expected_claim(problem))
-        width = 2.0 * problem.critical * float(problem.T[0, 0]) * root
+        length = 2.0 * problem.critical * float(problem.T[0, 0]) * root
     return ExactResult(
         coverage=float(found.within[0]),
         size=float(found.beyond[0]),
         miss_below=None if found.below is None else float(found.below[0]),
         miss_above=None if found.above is None else float(found.above[0]),
-        width=width,
+        width=length,
         error=float(found.error[0]),
     )

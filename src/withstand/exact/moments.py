@@ -98,8 +98,7 @@ def moments(procedure: LinearProcedure, design: Design, focus: Focus, disturbanc
     """
     if not focus.scalar or disturbance.outliers:
         return None
-    # The level only sets the critical value, of which moments are free.
-    problem = pose(procedure, design, focus, disturbance, 0.95)
+    problem = pose(procedure, design, focus, disturbance, None)
     unit = float(problem.T[0, 0]) ** 2
     focal = problem.Q[:, -1:]
     variance = float((focal.T @ problem.covariance(focal))[0, 0]) + problem.added

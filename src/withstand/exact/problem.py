@@ -7,7 +7,9 @@ classical joint test D = I/(n - p) and c^2 = k F.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
+from weakref import WeakKeyDictionary
 
 import numpy as np
 from scipy.linalg import qr, solve_triangular
@@ -91,8 +93,40 @@ class Problem:
         return np.asarray(solve_triangular(self.T, np.asarray(values, dtype=np.float64).T, trans="T").T)
 
 
-def pose(procedure: LinearProcedure, design: Design, focus: Focus, disturbance: Disturbance, level: float) -> Problem:
+@dataclass(frozen=True, eq=False)
+class _Frame:
+    """What does not depend on the world: see Problem; A is the estimator (k, n)."""
+
+    A: Floats
+    Q: Floats
+    T: Floats
+    middle: Middle
+    unit: float
+
+
+_frames: WeakKeyDictionary[Design, dict[tuple[object, ...], _Frame]] = WeakKeyDictionary()
+"""By design, since the same procedure is asked about many worlds on it; a frame goes when its design goes."""
+
+_criticals: WeakKeyDictionary[Design, dict[tuple[object, ...], float]] = WeakKeyDictionary()
+
+
+def pose(
+    procedure: LinearProcedure, design: Design, focus: Focus, disturbance: Disturbance, level: float | None
+) -> Problem:
     """Bring a question into unit coordinates; `cannot` of `applicability` has been asked before.
+
+    Parameters
+    ----------
+    procedure : LinearProcedure
+        Applicable to the focus.
+    design : Design
+        The rows on which the disturbance was realised.
+    focus : Focus
+        The focal quantity.
+    disturbance : Disturbance
+        A world realised on the design.
+    level : float or None
+        Confidence level; None where only moments are wanted, which are free of the critical value.
 
     Raises
     ------
@@ -101,6 +135,43 @@ def pose(procedure: LinearProcedure, design: Design, focus: Focus, disturbance: 
     """
     used = procedure.fitted_design(design)
     root = np.sqrt(np.asarray(design.weights)) if procedure.weighted else np.ones(design.n)
+    frame = _frame(procedure, design, focus)
+    k = focus.k
+    critical = math.nan if level is None else _critical(procedure, design, frame.A, level)
+    mean = None if disturbance.mean is None else root * disturbance.mean
+    bias = -disturbance.target_shift(focus) if mean is None else frame.A @ mean - disturbance.target_shift(focus)
+    residual = None if mean is None else mean - used.Q @ (used.Q.T @ mean)
+    if residual is not None and np.abs(residual).max() <= 1e-13 * np.abs(mean).max():
+        residual = None
+    dependence = disturbance.dependence
+    new = focus.kind is FocusKind.NEW and focus.point is not None
+    point_spread = disturbance.spread_at(focus.point) if new and focus.point is not None else 0.0
+    return Problem(
+        Q=frame.Q,
+        k=k,
+        T=frame.T,
+        middle=frame.middle,
+        threshold=critical**2 if k == 1 else k * critical,
+        shift=solve_triangular(frame.T, bias, trans="T"),
+        residual_mean=residual,
+        spread=root if disturbance.spread is None else root * disturbance.spread,
+        correlation=None if dependence is None else correlation_of(dependence),
+        disturbance=disturbance,
+        added=point_spread**2 / frame.unit,
+        critical=critical,
+    )
+
+
+def _frame(procedure: LinearProcedure, design: Design, focus: Focus) -> _Frame:
+    known = _frames.setdefault(design, {})
+    key = (procedure.identity, focus.L.tobytes(), focus.L.shape, focus.kind, focus.point is None)
+    if key not in known:
+        known[key] = _build(procedure, design, focus)
+    return known[key]
+
+
+def _build(procedure: LinearProcedure, design: Design, focus: Focus) -> _Frame:
+    used = procedure.fitted_design(design)
     A = used.estimator(focus.L)
     k = focus.k
     O, T = qr(used.basis_rows(focus.L).T, mode="full")
@@ -108,35 +179,20 @@ def pose(procedure: LinearProcedure, design: Design, focus: Focus, disturbance: 
     flip = np.where(np.diag(T) < 0.0, -1.0, 1.0)
     O[:, :k] *= flip
     T = flip[:, None] * T
-    Q = used.Q @ np.roll(O, -k, axis=1)
     unit = float(T[0, 0]) ** 2 if k == 1 else 1.0
     new = focus.kind is FocusKind.NEW and focus.point is not None
-    critical = procedure.critical(used, A, level)
     if k == 1:
         middle = middle_of(procedure.form(used, A), 1.0 / unit, 1.0 / (used.df * unit) if new else 0.0)
-        threshold = critical**2
     else:
-        middle, threshold = DiagonalMiddle(np.full(design.n, 1.0 / used.df)), k * critical
+        middle = DiagonalMiddle(np.full(design.n, 1.0 / used.df))
     if middle is None:
         raise TypeError(f"the variance estimate of '{procedure.name}' has no exact answers")
-    mean = None if disturbance.mean is None else root * disturbance.mean
-    bias = -disturbance.target_shift(focus) if mean is None else A @ mean - disturbance.target_shift(focus)
-    residual = None if mean is None else mean - used.Q @ (used.Q.T @ mean)
-    if residual is not None and np.abs(residual).max() <= 1e-13 * np.abs(mean).max():
-        residual = None
-    dependence = disturbance.dependence
-    point_spread = disturbance.spread_at(focus.point) if new and focus.point is not None else 0.0
-    return Problem(
-        Q=np.ascontiguousarray(Q),
-        k=k,
-        T=T,
-        middle=middle,
-        threshold=threshold,
-        shift=solve_triangular(T, bias, trans="T"),
-        residual_mean=residual,
-        spread=root if disturbance.spread is None else root * disturbance.spread,
-        correlation=None if dependence is None else correlation_of(dependence),
-        disturbance=disturbance,
-        added=point_spread**2 / unit,
-        critical=critical,
-    )
+    return _Frame(A, np.ascontiguousarray(used.Q @ np.roll(O, -k, axis=1)), T, middle, unit)
+
+
+def _critical(procedure: LinearProcedure, design: Design, A: Floats, level: float) -> float:
+    known = _criticals.setdefault(design, {})
+    key = (procedure.identity, A.tobytes(), level)
+    if key not in known:
+        known[key] = procedure.critical(procedure.fitted_design(design), A, level)
+    return known[key]

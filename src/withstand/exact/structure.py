@@ -7,6 +7,7 @@ import numpy as np
 from withstand.departures.world import Disturbance
 from withstand.exact.band import BandSweep
 from withstand.exact.chain import TridiagonalSolves
+from withstand.exact.compressed import CompressedRows, worthwhile
 from withstand.exact.correlation import Chain, Correlation, Shared, correlation_of
 from withstand.exact.grouped import RowSums
 from withstand.exact.middle import BandMiddle, DiagonalMiddle, GroupedMiddle, RowsMiddle
@@ -35,6 +36,8 @@ def structure_of(problem: Problem) -> Structure:
     columns, p, spread = problem.columns, problem.p, problem.spread
     plain = problem.disturbance.dependence is None
     match middle:
+        case DiagonalMiddle() if plain and worthwhile(spread**2 * middle.d):
+            return CompressedRows(columns, p, middle.d, spread)
         case DiagonalMiddle() if plain:
             return RowSums(columns, p, middle.d, spread)
         case DiagonalMiddle() if isinstance(correlation, Shared):

@@ -2,17 +2,20 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from enum import StrEnum
 
 import numpy as np
+from scipy.interpolate import PchipInterpolator
 
 from withstand.departures.base import Departure
 from withstand.diagnostics.base import Tail
 from withstand.diagnostics.critical import Critical
-from withstand.diagnostics.for_departure import statistic_for
+from withstand.diagnostics.for_departure import Chosen, statistic_for
+from withstand.judgement.plausible import SeverityLaw
 from withstand.judgement.residual_laws import REPLICATES, Request, simulate
-from withstand.study.design import Design
+from withstand.study.design import Design, Floats
 
 EVEN_CHANCE = 0.5
 """A departure that its diagnostic shows less often than this is called hard to see."""
@@ -65,6 +68,45 @@ def hazard(harmful: bool, seen: Detectability) -> Hazard:
     return Hazard.HARMLESS if seen.hard_to_see else Hazard.FALSE_ALARM
 
 
+@dataclass(frozen=True, eq=False)
+class Detector:
+    """Power of a residual statistic over severity, read off its simulated law.
+
+    Parameters
+    ----------
+    design : Design
+        The rows.
+    law : SeverityLaw
+        The simulated statistic at each of its severities.
+    critical : Critical
+        Critical values at the neutral severity.
+    power : ndarray of shape (S,)
+        Share of rejections at each severity.
+    """
+
+    design: Design
+    law: SeverityLaw
+    critical: Critical
+    power: Floats
+
+    @classmethod
+    def of(cls, design: Design, law: SeverityLaw) -> Detector:
+        """Read the power off a law."""
+        neutral = int(np.flatnonzero(law.span.severities == law.span.neutral)[0])
+        critical = Critical.of(law.values[neutral], _tail(law.chosen), ALPHA)
+        return cls(design, law, critical, np.asarray(critical.rejects(law.values).mean(axis=1)))
+
+    def at(self, severity: float) -> Detectability | None:
+        """The power at a severity, interpolated between those simulated; None beyond them."""
+        span = self.law.span
+        if not span.severities[0] <= severity <= span.severities[-1]:
+            return None
+        curve = PchipInterpolator(span.scale(span.severities), self.power)
+        power = float(np.clip(curve(span.scale(np.array(severity))), 0.0, 1.0))
+        mc_se = math.sqrt(power * (1.0 - power) / self.law.values.shape[1])
+        return Detectability(severity, power, mc_se, self.law.chosen.title, self.critical)
+
+
 def detectability(
     design: Design, departure: Departure, severities: list[float], *, seed: int, replicates: int = REPLICATES
 ) -> list[Detectability] | None:
@@ -96,10 +138,14 @@ def detectability(
         return None
     request = Request(departure, chosen, np.array([departure.neutral, *severities]))
     values = simulate(design, [request], seed=seed, replicates=replicates)[0]
-    tail = Tail.UPPER if chosen.mirrored else chosen.tail
-    critical = Critical.of(values[0], tail, ALPHA)
+    critical = Critical.of(values[0], _tail(chosen), ALPHA)
     result = []
     for severity, row in zip(severities, values[1:], strict=True):
         power, mc_se = critical.power(row)
         result.append(Detectability(severity, power, mc_se, chosen.title, critical))
     return result
+
+
+def _tail(chosen: Chosen) -> Tail:
+    """The side that counts; a mirrored statistic is kept as its absolute value."""
+    return Tail.UPPER if chosen.mirrored else chosen.tail

@@ -26,7 +26,7 @@ from withstand.study.growth import Growth
 from withstand.study.study import Study
 
 _DOUBLINGS = 8
-_ROWS = 10_000
+_ROWS = 5000
 """Doublings and rows to go to, at least two doublings."""
 
 _STILL_RISING = 0.005
@@ -118,13 +118,13 @@ def limit_from(stages: Sequence[Stage], accepted: Aspect, level: float) -> Limit
     return Limit(Cure.FADES if coverage >= accepted.low else Cure.NEVER, coverage, ratio, bias_stays=False)
 
 
-def limit_of(growth: Growth, procedure: Procedure, focus: Focus, world: World, accepted: Aspect) -> Limit | None:
+def limit_of(studies: Sequence[Study], procedure: Procedure, focus: Focus, world: World, accepted: Aspect) -> Limit | None:
     """The large-sample limit of a cell.
 
     Parameters
     ----------
-    growth : Growth
-        How rows are added.
+    studies : sequence of Study
+        The study and its doublings; see `doublings`.
     procedure : Procedure
         Only procedures linear in the response have a known limit.
     focus : Focus
@@ -141,10 +141,11 @@ def limit_of(growth: Growth, procedure: Procedure, focus: Focus, world: World, a
     """
     if not isinstance(procedure, LinearProcedure) or not focus.scalar:
         return None
-    studies = _grown(growth)
+    # The limit is read off the last three alone.
+    studies = studies[-3:]
     if len(studies) < 3 or any(procedure.not_applicable(study.design, focus) for study in studies):
         return None
-    level = growth.study.level
+    level = studies[0].level
     line = replace(focus, kind=FocusKind.MEAN) if focus.kind is FocusKind.NEW else focus
     stages = []
     for study in studies:
@@ -166,7 +167,7 @@ def _coverage(ratio: float, level: float) -> float:
     return 1.0 - 2.0 * float(stats.norm.sf(float(stats.norm.isf((1.0 - level) / 2.0)) * ratio))
 
 
-def _grown(growth: Growth) -> list[Study]:
+def doublings(growth: Growth) -> list[Study]:
     """The study and its doublings, as far as the rule and the bound on rows go."""
     studies = [growth.study]
     base = growth.study.n

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import repeat
 
 import numpy as np
 from scipy.interpolate import PchipInterpolator
@@ -16,7 +17,7 @@ from scipy.interpolate import PchipInterpolator
 from withstand.departures.base import Departure
 from withstand.diagnostics.base import observed as observed_sample
 from withstand.diagnostics.for_departure import Chosen, statistic_for
-from withstand.judgement.residual_laws import REPLICATES, Request, simulate
+from withstand.judgement.residual_laws import REPLICATES, Companions, Request, simulate
 from withstand.judgement.severities import Span, span_of
 from withstand.study.design import Design, Floats
 
@@ -192,7 +193,12 @@ class Inversion:
 
 
 def severity_laws(
-    design: Design, departures: Sequence[Departure], *, seed: int, replicates: int = REPLICATES
+    design: Design,
+    departures: Sequence[Departure],
+    *,
+    seed: int,
+    companions: Sequence[Companions] | None = None,
+    replicates: int = REPLICATES,
 ) -> list[SeverityLaw | None]:
     """Simulate the law of each departure's residual statistic over its severities.
 
@@ -204,6 +210,8 @@ def severity_laws(
         Applicable ones; their own ladders are not used.
     seed : int
         Seed of the study's run.
+    companions : sequence of tuple of (Departure, float), optional
+        What acts besides each departure; nothing if left out.
     replicates : int
         Simulated values at each severity.
 
@@ -215,8 +223,8 @@ def severity_laws(
     chosen = [statistic_for(departure, design) for departure in departures]
     spans = [span_of(departure, design) for departure in departures]
     requests = [
-        Request(departure, statistic, span.severities)
-        for departure, statistic, span in zip(departures, chosen, spans, strict=True)
+        Request(departure, statistic, span.severities, besides)
+        for departure, statistic, span, besides in zip(departures, chosen, spans, companions or repeat(()), strict=False)
         if statistic is not None
     ]
     values = iter(simulate(design, requests, seed=seed, replicates=replicates))

@@ -19,6 +19,8 @@ from withstand.engine.noise import BlockNoise
 from withstand.procedures.sample import Sample
 from withstand.study.design import Design, Floats
 
+Companions = tuple[tuple[Departure, float], ...]
+
 FIRST_BLOCK = 1 << 40
 """Number of the first block used here."""
 
@@ -38,11 +40,18 @@ class Request:
         Its residual statistic on the design.
     severities : ndarray of shape (S,)
         Where to simulate.
+    companions : tuple of (Departure, float)
+        Further departures that act all the while, each at one severity.
     """
 
     departure: Departure
     chosen: Chosen
     severities: Floats
+    companions: Companions = ()
+
+    def world(self, severity: float) -> World:
+        """The world at one severity."""
+        return World(((self.departure, severity), *self.companions))
 
 
 def simulate(design: Design, requests: Sequence[Request], *, seed: int, replicates: int = REPLICATES) -> list[Floats]:
@@ -67,7 +76,7 @@ def simulate(design: Design, requests: Sequence[Request], *, seed: int, replicat
     width = block_width(design.n)
     blocks = -(-replicates // width)
     results = [np.empty((len(request.severities), blocks * width)) for request in requests]
-    disturbances = [[World(((request.departure, float(s)),)).on(design) for s in request.severities] for request in requests]
+    disturbances = [[request.world(float(s)).on(design) for s in request.severities] for request in requests]
     buffer = np.empty((design.n, width))
     noise_buffers: dict[str, Floats] = {}
     work: dict[str, Floats] = {}

@@ -8,13 +8,13 @@ simultaneous over the n looked at, gives the interval of the answer. Exact margi
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass
+from collections.abc import Callable, Sequence
 
 import numpy as np
-from scipy import optimize, stats
+from scipy import stats
 
-from withstand.study.design import Floats
+from withstand.judgement.crossing import crossings
+from withstand.judgement.size_points import FoundSize, Requirement, SizePoint, Sizes
 
 FINE = 1.06
 """Bisection of simulated margins ends when the ends of the bracket are within this ratio."""
@@ -22,118 +22,8 @@ FINE = 1.06
 _CONFIRMATIONS = 3
 """Second looks at most: each that moves the answer asks for another."""
 
-
-@dataclass(frozen=True)
-class Requirement:
-    """A bound that a measure must keep.
-
-    Parameters
-    ----------
-    key : str
-        Names it within the search.
-    measure : str
-        As in the tables of measures, or `half_width`.
-    low, high : float
-        Accepted range; infinite where a side is free.
-    words : str
-        As a person would say it.
-    """
-
-    key: str
-    measure: str
-    low: float = -math.inf
-    high: float = math.inf
-    words: str = ""
-
-    def margin(self, value: float) -> float:
-        """How far a value is inside the range, in the unit of the measure; negative outside."""
-        return min(value - self.low, self.high - value)
-
-    @property
-    def bound(self) -> float:
-        """The bound, where there is one; the upper of two."""
-        return self.high if math.isfinite(self.high) else self.low
-
-
-@dataclass(frozen=True)
-class Reading:
-    """A measure at one n: its value and Monte Carlo standard error, 0 where it is exact."""
-
-    value: float
-    se: float = 0.0
-
-    @property
-    def exact(self) -> bool:
-        """Whether it has no Monte Carlo error."""
-        return self.se == 0.0
-
-
-@dataclass(frozen=True)
-class SizePoint:
-    """What was found at one n.
-
-    Parameters
-    ----------
-    n : int
-        Rows.
-    readings : mapping of str to Reading
-        By key of the requirement.
-    """
-
-    n: int
-    readings: Mapping[str, Reading]
-
-
-@dataclass(frozen=True)
-class Sizes:
-    """The n that can be the answer: smallest, smallest + step, ... up to largest."""
-
-    smallest: int
-    largest: int
-    step: int = 1
-
-    def up(self, n: float) -> int:
-        """The first of them at or above n; the last one where there is none."""
-        steps = math.ceil((n - self.smallest) / self.step - 1e-9)
-        return min(self.smallest + max(steps, 0) * self.step, self.last)
-
-    @property
-    def last(self) -> int:
-        """The largest of them."""
-        return self.smallest + (self.largest - self.smallest) // self.step * self.step
-
-
-@dataclass(frozen=True)
-class FoundSize:
-    """The answer of a search.
-
-    Parameters
-    ----------
-    n : int or None
-        The smallest n from which everything is met; None where none up to the largest tried.
-    low, high : int
-        Interval of the answer; high is the largest n tried where the band does not tell.
-    bounded : bool
-        Whether `high` is an end of the interval, not of the search.
-    points : tuple of SizePoint
-        Everything looked at with the first noise, by n.
-    confirmed : tuple of SizePoint
-        Second looks with fresh noise.
-    binding : str
-        Key of the requirement that asks for the most rows.
-    exact : bool
-        Whether no Monte Carlo error is in it.
-    """
-
-    n: int | None
-    low: int
-    high: int
-    bounded: bool
-    points: tuple[SizePoint, ...]
-    confirmed: tuple[SizePoint, ...]
-    binding: str
-    exact: bool
-
+_BEYOND = 4
+"""The next larger n that are looked at as well where answers are exact: balance may come and go with n."""
 
 Judge = Callable[[int], SizePoint]
 
@@ -215,16 +105,20 @@ class SizeSearch:
             n = self._sizes.up(2 * n)
 
     def _bisect_exactly(self, failed: int, met: int) -> None:
-        """To neighbours; where the next larger n fails after all (designs of unequal balance), from there on."""
+        """To neighbours; where one of the next larger n fails after all (designs of unequal balance), from there on."""
+        step = self._sizes.step
         while True:
-            while failed and met - failed > self._sizes.step:
-                middle = self._sizes.up((failed + met) // 2)
-                middle = middle if middle < met else met - self._sizes.step
+            while failed and met - failed > step:
+                middle = min(self._sizes.up((failed + met) / 2.0), met - step)
                 failed, met = (failed, middle) if self._at(middle) == 1 else (middle, met)
-            after = min(met + self._sizes.step, self._sizes.last)
-            if self._at(after) == 1:
+            beyond = [self._sizes.up(met + i * step) for i in range(1, _BEYOND + 1)]
+            failing = [n for n in beyond if self._at(n) != 1]
+            if not failing or failing[-1] == self._sizes.last:
                 return
-            failed, met = after, min((n for n in self._points if n > after and self._at(n) == 1), default=after)
+            failed = failing[-1]
+            met = min((n for n in self._points if n > failed and self._at(n) == 1), default=self._sizes.up(failed + step))
+            while self._at(met) != 1 and met != self._sizes.last:
+                failed, met = met, self._sizes.up(2 * met)
 
     def _bisect(self, failed: int, met: int) -> None:
         while failed and met / failed > FINE and met - failed > self._sizes.step:
@@ -240,11 +134,27 @@ class SizeSearch:
         for n in (found.n, found.low, found.high):
             if n is not None:
                 self._at(n)
+        self._close_exact_bracket()
         for _ in range(_CONFIRMATIONS):
             n = self._found().n
-            if n is None or any(point.n == n for point in self._confirmed):
+            if n is None or any(max(n, point.n) <= FINE * min(n, point.n) for point in self._confirmed):
                 return
             self._confirmed.append(self._confirm(n))
+
+    def _close_exact_bracket(self) -> None:
+        """Where the requirement that decides is exact though others are simulated, its neighbours tell its n to the row."""
+        while True:
+            key = self._found().binding
+            requirement = next(r for r in self._requirements if r.key == key)
+            readings = {n: point.readings[key] for n, point in sorted(self._points.items())}
+            failing = [n for n, reading in readings.items() if requirement.margin(reading.value) < 0.0]
+            if not all(reading.exact for reading in readings.values()) or not failing:
+                return
+            failed = failing[-1]
+            met = min((n for n in readings if n > failed), default=None)
+            if met is None or met - failed <= self._sizes.step:
+                return
+            self._at(min(self._sizes.up((failed + met) / 2.0), met - self._sizes.step))
 
     def _found(self) -> FoundSize:
         answers = {r.key: self._crossings(r) for r in self._requirements}
@@ -270,65 +180,6 @@ class SizeSearch:
         margins = np.array([requirement.margin(reading.value) for reading in readings])
         errors = np.array([reading.se for reading in readings])
         return crossings(n, margins, errors, self._z(len(points)))
-
-
-def crossings(n: Floats, margins: Floats, errors: Floats, z: float) -> tuple[float | None, float | None, float | None]:
-    """Where a curve that grows with n, known at some n with error, crosses zero.
-
-    Parameters
-    ----------
-    n : ndarray of shape (m,)
-        In increasing order; may repeat.
-    margins, errors : ndarray of shape (m,)
-        Values and standard errors; 0 for exact values.
-    z : float
-        Half width of the band in standard errors.
-
-    Returns
-    -------
-    tuple of float or None
-        Crossing of the monotone curve (weighted least squares, by pooling neighbours), of its upper band (the earliest n that is
-        possible) and of its lower band (the latest). Between two n the curve is a straight line in 1/n.
-
-    Notes
-    -----
-    Values before the last that clearly lies below zero are left out: the curve may start high by chance of a tiny design.
-    """
-    clearly_below = np.flatnonzero(margins + z * errors < 0.0)
-    start = int(clearly_below[-1]) if clearly_below.size else 0
-    n, margins, errors = n[start:], margins[start:], errors[start:]
-    exact = errors == 0.0
-    floor = float(errors[~exact].min()) * 1e-3 if (~exact).any() else 1.0
-    weights = np.maximum(errors, floor) ** -2.0
-    distinct = np.unique(n)
-    pooled = np.array([np.average(margins[n == one], weights=weights[n == one]) for one in distinct])
-    total = np.array([weights[n == one].sum() for one in distinct])
-    spread = np.where([exact[n == one].any() for one in distinct], 0.0, total**-0.5)
-    curve = optimize.isotonic_regression(pooled, weights=total).x
-    upper = np.minimum.accumulate((pooled + z * spread)[::-1])[::-1]
-    lower = np.maximum.accumulate(pooled - z * spread)
-    # Pooling may push the curve past its own band where exact and simulated values meet.
-    return _ordered(_crossing(distinct, curve), _crossing(distinct, upper), _crossing(distinct, lower))
-
-
-def _ordered(middle: float | None, low: float | None, high: float | None) -> tuple[float | None, float | None, float | None]:
-    """The three crossings with low <= middle <= high, None standing for beyond."""
-    if middle is None:
-        return None, low, None
-    low = middle if low is None else min(low, middle)
-    return middle, low, None if high is None else max(high, middle)
-
-
-def _crossing(n: Floats, curve: Floats) -> float | None:
-    met = np.flatnonzero(curve >= 0.0)
-    if not met.size:
-        return None
-    i = int(met[0])
-    if i == 0:
-        return float(n[0])
-    before, after = curve[i - 1], curve[i]
-    share = -before / (after - before)
-    return float(1.0 / (1.0 / n[i - 1] + share * (1.0 / n[i] - 1.0 / n[i - 1])))
 
 
 def _largest(ends: Sequence[float | None]) -> float | None:

@@ -3,14 +3,16 @@
 from __future__ import annotations
 
 import platform
+from contextlib import suppress
 from importlib import metadata
 from typing import Any
 
+from withstand import __version__
 from withstand.lab.plan import Plan
 from withstand.study.facts import design_facts
 from withstand.study.study import Study
 
-_LIBRARIES = ("withstand", "numpy", "scipy", "pandas", "statsmodels", "formulaic")
+_LIBRARIES = ("numpy", "scipy", "pandas", "statsmodels", "formulaic")
 
 
 def study_facts(study: Study) -> dict[str, Any]:
@@ -45,10 +47,11 @@ def study_facts(study: Study) -> dict[str, Any]:
 
 
 def library_versions() -> dict[str, str]:
-    """Versions of what computed the numbers."""
-    versions = {"python": platform.python_version()}
+    """Versions of what computed the numbers; a package that runs from its sources, not installed, has none."""
+    versions = {"withstand": __version__, "python": platform.python_version()}
     for name in _LIBRARIES:
-        versions[name] = metadata.version(name)
+        with suppress(metadata.PackageNotFoundError):
+            versions[name] = metadata.version(name)
     return versions
 
 

@@ -14,11 +14,11 @@ from scipy import stats
 from withstand.departures.world import World
 from withstand.engine.executors import open_executor
 from withstand.errors import ScenarioError
-from withstand.judgement.sample_size import Requirement
+from withstand.judgement.size_points import Requirement
 from withstand.lab.frames import CellAnswers
 from withstand.lab.size_look import Look, reading
 from withstand.lab.size_plan import Condition, Effort, chosen_focus
-from withstand.lab.sizing import noise_seed
+from withstand.lab.size_question import noise_seed
 from withstand.procedures.base import Answer, Procedure
 from withstand.study.focus import Focus, FocusKind
 from withstand.study.growth import growth_of

@@ -44,7 +44,7 @@ def place(grid: Grid, cell: Cell) -> dict[str, object]:
     return {
         "n": grid.study.n,
         "departure": "none" if axis is None else axis.departure.kind,
-        "along": "" if axis is None else axis.departure.along,
+        "along": "" if axis is None else grid.along(axis),
         "severity": cell.spot.severity,
         "severity_label": "nothing wrong" if axis is None else axis.departure.label(cell.spot.severity),
         "stack": "" if axis is None else axis.stack,

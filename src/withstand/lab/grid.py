@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass, replace
 from functools import cached_property
 
+from withstand.departures.base import Departure
 from withstand.departures.world import World
 from withstand.engine.block import BASELINE
 from withstand.engine.job import TASK_REPLICATES, Job, tasks_for
@@ -58,31 +59,56 @@ class Grid:
         What the user has.
     plan : Plan
         What to try; departures that make no sense here are in `impossible`.
+    points : tuple of (Axis, float), optional
+        Axes with severities to visit, instead of the plan's ladders. They may lie beyond what a scenario may ask for, such as a
+        ratio of SDs below 1: the departure turned round.
     """
 
     study: Study
     plan: Plan
+    points: tuple[tuple[Axis, float], ...] | None = None
 
     @cached_property
     def impossible(self) -> dict[str, str]:
-        """Why a departure makes no sense on this design, by its name."""
+        """Why a departure makes no sense on this design, by the identity of its axis."""
         reasons = {}
         for axis in self.plan.axes:
             for departure in (axis.departure, *(companion for companion, _ in axis.companions)):
                 reason = departure.not_applicable(self.study.design)
                 if reason is not None:
-                    reasons[axis.departure.name] = reason
+                    reasons[axis.identity] = f"{departure.name}: {reason}"
         return reasons
+
+    @cached_property
+    def possible(self) -> tuple[Axis, ...]:
+        """The axes that make sense on this design."""
+        return tuple(axis for axis in self.plan.axes if axis.identity not in self.impossible)
+
+    @cached_property
+    def _along(self) -> dict[str, str]:
+        """What tells axes of one kind apart, by identity of the axis: the column, and what else it takes."""
+        found = {}
+        for axis in self.plan.axes:
+            kin = [
+                other for other in self.plan.axes if (other.departure.kind, other.stack) == (axis.departure.kind, axis.stack)
+            ]
+            for tell in (lambda d: d.along, _variant, _options):
+                found[axis.identity] = tell(axis.departure)
+                if [tell(other.departure) for other in kin].count(found[axis.identity]) == 1:
+                    break
+        return found
+
+    def along(self, axis: Axis) -> str:
+        """The column an axis acts along, with its variant where the plan has several that differ in nothing else."""
+        return self._along[axis.identity]
 
     @cached_property
     def spots(self) -> tuple[Spot, ...]:
         """The baseline, then every severity of every possible departure."""
-        spots = [Spot(None, 0.0, BASELINE)]
-        for axis in self.plan.axes:
-            if axis.departure.name not in self.impossible:
-                for severity in axis.departure.ladder:
-                    spots.append(Spot(axis, severity, len(spots) - 1))
-        return tuple(spots)
+        points = self.points
+        if points is None:
+            points = tuple((axis, severity) for axis in self.possible for severity in axis.departure.ladder)
+        return (Spot(None, 0.0, BASELINE), *(Spot(axis, severity, i) for i, (axis, severity) in enumerate(points)))
 
     @cached_property
     def job(self) -> Job:
@@ -114,7 +140,18 @@ class Grid:
                     if (i, j) not in self.job.refusals:
                         yield Cell(spot, i, j, procedure, focus)
 
-    def with_axis(self, axis: Axis, severity: float) -> Grid:
-        """The same study and procedures with one departure at one severity, as the search for a tipping point needs it."""
-        single = Axis(replace(axis.departure, severity=(severity,)), axis.companions)
-        return Grid(self.study, replace(self.plan, axes=(single,)))
+    def at(self, points: Iterable[tuple[Axis, float]], procedures: Iterable[Procedure] | None = None) -> Grid:
+        """The same study at other severities, with all or some of the procedures."""
+        plan = self.plan if procedures is None else replace(self.plan, procedures=tuple(procedures))
+        return Grid(self.study, plan, tuple(points))
+
+
+def _variant(departure: Departure) -> str:
+    """The column with what its name says besides: 'dry_hours, downwards'."""
+    rest = departure.name.removeprefix(departure.kind).removeprefix(f" along {departure.along}").strip(", ")
+    return ", ".join(part for part in (departure.along, rest) if part)
+
+
+def _options(departure: Departure) -> str:
+    """Every option that is not at its default."""
+    return departure.identity.removeprefix(departure.kind).strip("()")

@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 
 import pandas as pd
 
+from withstand.departures.world import World
 from withstand.engine.tally import Tally
+from withstand.exact import can_be_exact, coverage, moments
 from withstand.judgement.verdict import Judgement, judge, judge_exact
 from withstand.lab.frames import CellAnswers, place
 from withstand.lab.grid import Cell, Grid
@@ -22,7 +25,29 @@ def judge_cell(grid: Grid, cell: Cell, tally: Tally) -> Judgement:
 
 def judge_answers(grid: Grid, cell: Cell, answers: CellAnswers) -> Judgement | None:
     """The verdict of a cell with exact answers; None where a measure that decides has none."""
-    values = {name: answer.estimate.value for name, answer in answers.items()}
+    return _judge_values(grid, cell, {name: answer.estimate.value for name, answer in answers.items()})
+
+
+def judge_exactly(grid: Grid, cell: Cell, world: World) -> Judgement | None:
+    """The exact verdict in any world, of the procedure and focal quantity of a cell; None where there is none.
+
+    Works out the measures that decide and no others.
+    """
+    study, procedure, focus = grid.study, cell.procedure, cell.focus
+    disturbance = world.on(study.design)
+    if not isinstance(procedure, LinearProcedure) or can_be_exact(procedure, focus, disturbance) is not None:
+        return None
+    result = coverage(procedure, study.design, focus, disturbance, study.level, width=False)
+    values = {"coverage": result.coverage}
+    if result.miss_below is not None and result.miss_above is not None:
+        values |= {"miss_below": result.miss_below, "miss_above": result.miss_above}
+    found = moments(procedure, study.design, focus, disturbance)
+    if found is not None:
+        values |= {"bias": study.error_sd * found.bias, "bias_in_sd": found.bias / math.sqrt(found.variance)}
+    return _judge_values(grid, cell, values)
+
+
+def _judge_values(grid: Grid, cell: Cell, values: dict[str, float]) -> Judgement | None:
     if "coverage" not in values:
         return None
     if isinstance(cell.procedure, LinearProcedure):

@@ -49,8 +49,8 @@ class Instead:
         """The explanation, then the two answers."""
         return (
             WHY_NOT,
-            f"{self.focus} by {self.procedure}: {self.estimate:.4g}, {100 * self.level:g} % interval {self.low:.4g} to {self.high:.4g}. "
-            "Effects outside it are what these data speak against.",
+            f"{self.focus} by {self.procedure}: {self.estimate:.4g}, {100 * self.level:g} % interval {self.low:.4g} to "
+            f"{self.high:.4g}. Effects outside it are what these data speak against.",
             f"These rows would notice an effect of {self.detectable:.4g} with power {DETECTED:g}. "
             "State the smallest effect that matters to ask about power.",
         )

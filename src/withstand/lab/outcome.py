@@ -17,8 +17,8 @@ VERDICT_COLUMNS = (
     "high", "method", "repetitions",
 )  # fmt: skip
 TIPPING_COLUMNS = (
-    "departure", "along", "procedure", "focus", "tipping", "last_holds", "first_gives", "plausible_low", "plausible_high",
-    "observed", "detectability_at_tipping",
+    "departure", "along", "stack", "procedure", "focus", "tipping", "last_holds", "first_gives", "plausible_low",
+    "plausible_high", "observed", "detectability_at_tipping",
 )  # fmt: skip
 RANKING_COLUMNS = (
     "departure", "along", "stack", "procedure", "focus", "worst_severity", "worst_label", "coverage_there", "shift_there",

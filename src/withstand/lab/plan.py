@@ -112,7 +112,7 @@ class Plan:
     def digest(self) -> str:
         """Hash of the plan; it goes into the report."""
         parts = [f"{axis.identity}:{axis.departure.ladder}" for axis in self.axes]
-        parts += [procedure.identity for procedure in self.procedures]
+        parts += [procedure.key for procedure in self.procedures]
         parts += [repr(self.tolerance), repr((self.seed, self.repetitions, self.most, self.wrong_verdict, self.method))]
         return hashlib.sha256("|".join(parts).encode()).hexdigest()
 

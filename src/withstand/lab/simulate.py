@@ -62,6 +62,15 @@ def simulated_answers(
     return answers
 
 
+def sharpened_count(answers: Mapping[Cell, CellAnswers], tallies: Mapping[Cell, Tally]) -> int:
+    """How many shares rest on the exact baseline as a control, rather than on the plain count."""
+    count = 0
+    for cell, found in answers.items():
+        sums = tallies[cell].products[Feature.ONE] / tallies[cell].units
+        count += sum(found[name].estimate.value != float(sums[PROPORTIONS[name]]) for name in PROPORTIONS if name in found)
+    return count
+
+
 def _sharpened(name: str, estimate: Estimate, known: CellAnswers, is_baseline: bool) -> Estimate:
     """The control-variate estimate of a share, where it has the smaller error.
 

@@ -1,153 +1,116 @@
-"""What ever more rows lead to: the large-sample limit of coverage, bias and width, from exact moments of a very large study."""
+"""Whether any number of rows can do: what is asked, against what ever more rows lead to."""
 
 from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
-import numpy as np
 from scipy import stats
 
-from withstand.departures.world import Disturbance
-from withstand.errors import InputError
-from withstand.exact import moments
-from withstand.judgement.sample_size import Requirement
-from withstand.lab.size_plan import Condition
-from withstand.procedures.base import REGISTRY, LinearProcedure, Procedure, make_procedure
-from withstand.study.focus import Focus, FocusKind
-from withstand.study.growth import Growth
-from withstand.study.study import Study
+from withstand.judgement.findings import Aspect
+from withstand.judgement.limit import Limit, limit_of
+from withstand.judgement.size_points import Requirement
+from withstand.lab.size_question import SizeQuestion
+from withstand.procedures.base import REGISTRY, Procedure, make_procedure
+from withstand.study.focus import FocusKind
+from withstand.study.growth import Extend, Stack
 
-LARGE = 40_000
-"""Rows of the very large study."""
-
-_GROWS = 1.5
-"""The bias vanishes against the standard error unless four times the rows raise it, in standard errors, by this factor."""
-
-_SLACK = 0.0015
-"""A limit counts as outside by more than this: a drawn table, however large, has a little spread of its own."""
-
-_SCORES = 100_001
-"""Points of the normal quantile grid on which the law of a new response is read."""
+_DRAWN = 0.002
+"""A limit read off drawn tables counts as outside by more than this: however large, they have a little spread of their own."""
 
 
 @dataclass(frozen=True)
-class Limit:
-    """Where a procedure goes as rows are added for ever.
+class Obstacle:
+    """A requirement that no number of rows meets.
 
     Parameters
     ----------
-    coverage : float
-        Of the interval.
-    bias_in_sd : float
-        In SDs of the estimate; infinite where it does not vanish.
-    half_width : float
-        In the unit of the focal quantity.
+    requirement : Requirement
+        What is asked.
+    coverage : float or None
+        Where the coverage goes.
     words : str
         What stands in the way, for people.
     """
 
-    coverage: float
-    bias_in_sd: float
-    half_width: float
+    requirement: Requirement
+    coverage: float | None
     words: str
 
-    def fails(self, requirement: Requirement) -> bool:
-        """Whether a requirement is not met in the limit."""
-        value = {
-            "coverage": self.coverage,
-            "size": 1.0 - self.coverage,
-            "bias_in_sd": self.bias_in_sd,
-            "half_width": self.half_width,
-        }.get(requirement.measure)
-        if value is None or requirement.margin(value) >= 0.0:
-            return False
-        return not math.isfinite(value) or -requirement.margin(value) > _SLACK * max(1.0, abs(value))
 
-
-def large_sample_limits(
-    growth: Growth, procedure: Procedure, focus: Focus, conditions: Sequence[Condition]
-) -> list[Limit | None]:
-    """The limit in each world; None where it is not known.
+class Limits:
+    """The large-sample limits of one procedure in some worlds.
 
     Parameters
     ----------
-    growth : Growth
-        How rows are added.
+    question : SizeQuestion
+        The study with its doublings, the focal quantity and the worlds.
     procedure : Procedure
-        Only procedures linear in the response have a known limit.
-    focus : Focus
-        A single quantity.
-    conditions : sequence of Condition
-        The worlds.
-
-    Notes
-    -----
-    For an estimate with bias b and SD v whose claimed SD is c, the coverage tends to Phi(z c/v - b/v) - Phi(-z c/v - b/v);
-    b/v tends to 0, or to infinity where the bias stays as rows are added. The law of the errors plays no part but for a new
-    response, whose own error does not average out.
+        Only procedures linear in the response have known limits.
     """
-    if not isinstance(procedure, LinearProcedure) or not focus.scalar:
-        return [None] * len(conditions)
-    try:
-        large, larger = (growth.at(growth.smallest + -(-n // growth.step) * growth.step) for n in (LARGE // 4, LARGE))
-    except InputError:
-        # Some rules cannot grow some studies that far; the search itself then says so.
-        return [None] * len(conditions)
-    if any(procedure.not_applicable(grown.design, focus) for grown in (large, larger)):
-        return [None] * len(conditions)
-    found = []
-    for condition in conditions:
-        realised = [condition.world.on(grown.design) for grown in (large, larger)]
-        found.append(_limit(larger, procedure, focus, realised[0], realised[1]))
-    return found
+
+    def __init__(self, question: SizeQuestion, procedure: Procedure) -> None:
+        self._study = question.study
+        self._focus = question.focus
+        self._slack = 0.0 if isinstance(question.growth, Stack | Extend) else _DRAWN
+        # The tolerance is in the requirements; the limit itself does not depend on it.
+        anything = Aspect("coverage", 0.0, math.inf, -math.inf, math.inf, question.study.level, "")
+        studies = question.doublings
+        # Blocks in the model make columns as rows are added: no limit is known for those.
+        same = {study.design.names for study in studies} == {question.study.design.names}
+        self._known = [
+            limit_of(studies, procedure, question.focus, condition.world, anything) if same else None
+            for condition in question.conditions
+        ]
+
+    @property
+    def all_known(self) -> bool:
+        """Whether every world has a limit that the stages looked at have come close to."""
+        return all(limit is not None and not math.isnan(limit.coverage) for limit in self._known)
+
+    @property
+    def worst_coverage(self) -> float | None:
+        """The smallest of the known limits of coverage."""
+        return min((limit.coverage for limit in self._known if limit is not None and limit.coverage >= 0.0), default=None)
+
+    def obstacle(self, requirements: Sequence[Requirement]) -> Obstacle | None:
+        """The first requirement that no number of rows meets; None where there is none, or none is known."""
+        for requirement in requirements:
+            limit = self._known[requirement.condition]
+            if limit is not None and (words := self._against(requirement, limit)):
+                return Obstacle(requirement, None if math.isnan(limit.coverage) else limit.coverage, words)
+        return None
+
+    def _against(self, requirement: Requirement, limit: Limit) -> str:
+        match requirement.measure:
+            case "coverage" | "size" if not math.isnan(limit.coverage):
+                value = limit.coverage if requirement.measure == "coverage" else 1.0 - limit.coverage
+                if requirement.margin(value) >= -self._slack:
+                    return ""
+                if limit.bias_stays:
+                    return "the bias stays while the standard error shrinks"
+                if self._focus.kind is FocusKind.NEW:
+                    return "the interval for a new response takes the spread and the shape of its error for granted"
+                return f"the standard error claimed stays {limit.ratio:.2f} times the true one"
+            case "bias" | "bias_in_sd" if limit.bias_stays:
+                return "the bias stays while the standard error shrinks" if requirement.measure == "bias_in_sd" else ""
+            case "half_width" if self._focus.kind is FocusKind.NEW:
+                # What is left when the fit itself is known: the error of the new response.
+                least = float(stats.norm.isf((1.0 - self._study.level) / 2.0)) * self._study.error_sd
+                return (
+                    f"a new response has its own error, and its half width stays above {least:.4g}"
+                    if (requirement.margin(least) < 0.0)
+                    else ""
+                )
+        return ""
 
 
-def passing_procedures(
-    growth: Growth, focus: Focus, conditions: Sequence[Condition], requirements: Sequence[Requirement]
-) -> tuple[str, ...]:
-    """Registered procedures whose limits are all within what is asked."""
+def passing_procedures(question: SizeQuestion, requirements: Sequence[Requirement]) -> tuple[str, ...]:
+    """Registered procedures whose limits are known and all within what is asked."""
     passing = []
     for name in REGISTRY:
-        procedure = make_procedure(name)
-        limits = large_sample_limits(growth, procedure, focus, conditions)
-        known = [limit for limit in limits if limit is not None]
-        asked = [(limits[int(r.key.partition("|")[0])], r) for r in requirements]
-        if len(known) == len(limits) and not any(limit is not None and limit.fails(r) for limit, r in asked):
+        limits = Limits(question, make_procedure(name))
+        if limits.all_known and limits.obstacle(requirements) is None:
             passing.append(name)
     return tuple(passing)
-
-
-def _limit(study: Study, procedure: LinearProcedure, focus: Focus, large: Disturbance, larger: Disturbance) -> Limit | None:
-    z = float(stats.norm.isf((1.0 - study.level) / 2.0))
-    line = replace(focus, kind=FocusKind.MEAN) if focus.kind is FocusKind.NEW else focus
-    before = moments(procedure, large.design, line, large)
-    after = moments(procedure, larger.design, line, larger)
-    if before is None or after is None:
-        return None
-    first, bias = (found.bias / math.sqrt(found.variance) for found in (before, after))
-    stays = abs(bias) > 1e-6 and abs(bias) > _GROWS * abs(first)
-    if focus.kind is FocusKind.NEW:
-        return _new_response(study, focus, larger, z, after.bias if stays else 0.0)
-    ratio = math.sqrt(after.claimed_variance / after.variance)
-    if stays:
-        return Limit(0.0, math.copysign(math.inf, bias), 0.0, "the bias does not fade while the standard error does")
-    coverage = float(stats.norm.cdf(z * ratio) - stats.norm.cdf(-z * ratio))
-    words = f"the standard error claimed stays {ratio:.2f} times the true one however many rows there are"
-    return Limit(coverage, 0.0, 0.0, words)
-
-
-def _new_response(study: Study, focus: Focus, world: Disturbance, z: float, bias: float) -> Limit | None:
-    if focus.point is None:
-        return None
-    scores = np.asarray(stats.norm.ppf((np.arange(_SCORES) + 0.5) / _SCORES))
-    errors = (scores if world.law is None else world.law(scores)) * world.spread_at(focus.point)
-    curved = 0.0
-    if world.mean is not None:
-        left = world.mean - world.design.Q @ (world.design.Q.T @ world.mean)
-        curved = float(np.mean(left**2))
-    half = z * math.sqrt(1.0 + curved)
-    coverage = float(np.mean(np.abs(errors - bias) <= half))
-    words = "the interval for a new response takes the spread and the shape of its error for granted"
-    return Limit(coverage, 0.0, half * study.error_sd, words)

@@ -10,18 +10,14 @@ from withstand.departures.world import World
 from withstand.departures.worst_fan import WorstFan
 from withstand.errors import ScenarioError, nearest
 from withstand.judgement.aspects import aspects_of
-from withstand.judgement.sample_size import Requirement
+from withstand.judgement.size_points import Requirement
 from withstand.judgement.tolerance import Tolerance
 from withstand.lab.plan import Axis
 from withstand.procedures.base import Answer, LinearProcedure, Procedure
 from withstand.study.focus import Focus
 from withstand.study.study import Study
 
-NO_EFFECT = (
-    "State the smallest effect that matters, in the study (effect = { ... }) or with --effect. The fitted effect cannot stand in "
-    "for it: power at the observed effect only repeats the p-value (Hoenig & Heisey 2001). `withstand inspect` shows the "
-    "interval and the smallest effect these rows can detect."
-)
+NO_EFFECT = "State the smallest effect that matters, in the study (effect = { ... }) or with --effect."
 """The remedy where power is asked for without an effect."""
 
 
@@ -64,6 +60,11 @@ class Targets:
             )
         if not self.holds and self.power is None and self.half_width is None:
             raise ScenarioError("nothing is asked of the number of rows", where="size", remedy="Give a power or a half width.")
+
+    @property
+    def scale_free(self) -> bool:
+        """Whether the answer is the same for every error SD."""
+        return self.power is None and self.half_width is None
 
 
 @dataclass(frozen=True)
@@ -183,7 +184,8 @@ def requirements_of(
     for i, condition in enumerate(conditions):
         told = f" under {condition.name}" if not condition.world.baseline else " when nothing is wrong"
         found += [
-            replace(r, key=f"{i}|{r.measure}", words=r.words + told) for r in _of(targets, tolerance, study, procedure, focus)
+            replace(r, key=f"{i}|{r.measure}", words=r.words + told, condition=i)
+            for r in _of(targets, tolerance, study, procedure, focus)
         ]
     return tuple(found)
 

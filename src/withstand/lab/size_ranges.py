@@ -14,11 +14,15 @@ import pandas as pd
 from withstand.departures.world import World
 from withstand.engine.executors import open_executor
 from withstand.errors import ScenarioError, nearest
-from withstand.lab.size_plan import Effort
-from withstand.lab.sizing import SizeAnswer, size_study
+from withstand.lab.progress import Progress, Silent
+from withstand.lab.size_answer import SizeAnswer
+from withstand.lab.size_core import size_once
+from withstand.lab.size_plan import chosen_focus
+from withstand.lab.size_question import SizeQuestion, question_of
 from withstand.procedures.base import Procedure
 from withstand.study.columns import Drawn
-from withstand.study.planned import replanned
+from withstand.study.growth import growth_of
+from withstand.study.planning import Planner, replanned
 from withstand.study.study import Study
 
 MOST_CORNERS = 64
@@ -48,22 +52,22 @@ class CornerAnswer:
     @property
     def sentences(self) -> tuple[str, ...]:
         """The range of n in words, one sentence a procedure."""
+        corners = self.as_record()
         told = []
-        for procedure, rows in self.frame.groupby("procedure", sort=False):
-            known = rows[rows["n"].notna()]
-            if known.empty:
-                told.append(f"{procedure}: at no corner is there a number of rows; {rows['reason'].iloc[0]}.")
+        for procedure in dict.fromkeys(corner["procedure"] for corner in corners):
+            mine = [corner for corner in corners if corner["procedure"] == procedure]
+            known = sorted((corner for corner in mine if corner["n"] is not None), key=lambda corner: int(corner["n"]))
+            if not known:
+                told.append(f"{procedure}: at no corner is there a number of rows; {mine[0]['reason']}.")
                 continue
-            least, most = (known.loc[known["n"].astype(int).idxmin()], known.loc[known["n"].astype(int).idxmax()])
-            text = (
-                f"{procedure}: {int(least['n'])} rows ({self._corner(least)}) to {int(most['n'])} rows ({self._corner(most)})"
-            )
-            lost = len(rows) - len(known)
-            told.append(text + (f"; at {lost} of {len(rows)} corners none is enough." if lost else "."))
+            least, most = (f"{corner['n']} rows ({self._corner(corner)})" for corner in (known[0], known[-1]))
+            lost = len(mine) - len(known)
+            none = f"; at {lost} of {len(mine)} corners there is no number of rows" if lost else ""
+            told.append(f"{procedure}: {least} to {most}{none}.")
         return tuple(told)
 
-    def _corner(self, row: Any) -> str:
-        return ", ".join(f"{name} {row[name]:g}" for name in self.inputs)
+    def _corner(self, corner: Mapping[str, Any]) -> str:
+        return ", ".join(f"{name} {corner[name]:g}" for name in self.inputs)
 
     def as_record(self) -> list[dict[str, Any]]:
         """The corners as plain values."""
@@ -79,8 +83,8 @@ def size_over_ranges(
     worlds: Sequence[World],
     ranges: Mapping[str, Sequence[float]],
     *,
-    effort: Effort | None = None,
     executor: Executor | None = None,
+    progress: Progress | None = None,
     **asked: Any,
 ) -> CornerAnswer:
     """Answer at every corner of the ranges of uncertain inputs.
@@ -89,7 +93,7 @@ def size_over_ranges(
     ----------
     study : Study
         Data or plan.
-    procedures, worlds, effort, executor, asked
+    procedures, worlds, executor, progress, asked
         As in `size_study`.
     ranges : mapping of str to sequence of float
         Values to try. Names: `error_sd`, `effect`, the kind of a departure (its severity), and for plans `attrition` and
@@ -100,25 +104,27 @@ def size_over_ranges(
     ScenarioError
         If a name is unknown, a range is empty, or there are too many corners.
     """
-    _check(study, worlds, ranges)
-    corners = [dict(zip(ranges, values, strict=True)) for values in itertools.product(*ranges.values())]
-    effort = effort or Effort()
-    if executor is None:
-        with open_executor(effort.workers) as opened:
-            return size_over_ranges(study, procedures, worlds, ranges, effort=effort, executor=opened, **asked)
-    rows, answers = [], []
-    for corner in corners:
-        here = dict(asked)
-        if "effect" in corner:
-            here["effect"] = corner["effect"]
-        answer = size_study(
-            _moved(study, corner),
-            procedures,
-            [_at(world, corner) for world in worlds],
-            effort=effort,
-            executor=executor,
-            **here,
-        )
+    question = question_of(study, procedures, worlds, **asked)
+    # What the pilot leaves open goes along with what is asked.
+    span = None if question.targets.scale_free else pilot_range(study)
+    wanted = dict(ranges) if span is None else {"error_sd": span, **ranges}
+    watched = progress or Silent()
+    if executor is not None:
+        return corners_of(question, wanted, executor, watched)
+    with open_executor(question.effort.workers) as opened:
+        return corners_of(question, wanted, opened, watched)
+
+
+def corners_of(
+    question: SizeQuestion, ranges: Mapping[str, Sequence[float]], executor: Executor, progress: Progress
+) -> CornerAnswer:
+    """Answer at every corner; see `size_over_ranges`."""
+    _check(question.study, question.worlds, ranges)
+    rows: list[dict[str, Any]] = []
+    answers = []
+    for values in itertools.product(*ranges.values()):
+        corner = dict(zip(ranges, values, strict=True))
+        answer = size_once(_at(question, corner), executor, progress)
         answers.append(answer)
         rows += [
             corner
@@ -134,6 +140,20 @@ def size_over_ranges(
         ]
     frame = pd.DataFrame(rows).astype({"n": "Int64", "low": "Int64", "high": "Int64"})
     return CornerAnswer(tuple(ranges), frame, tuple(answers))
+
+
+def pilot_range(study: Study) -> tuple[float, float] | None:
+    """The range of an error SD that rests on a pilot."""
+    return study.grow.sd_range if isinstance(study.grow, Planner) else None
+
+
+def _at(question: SizeQuestion, corner: Mapping[str, float]) -> SizeQuestion:
+    study = _moved(question.study, corner)
+    effect = corner.get("effect")
+    focus = question.focus if effect is None else chosen_focus(study, question.focus.name, effect)
+    rule = None if study.grow is not None else question.growth.rule
+    worlds = tuple(_moved_world(world, corner) for world in question.worlds)
+    return replace(question, study=study, worlds=worlds, focus=focus, growth=growth_of(study, rule))
 
 
 def _check(study: Study, worlds: Sequence[World], ranges: Mapping[str, Sequence[float]]) -> None:
@@ -184,9 +204,9 @@ def _moved(study: Study, corner: Mapping[str, float]) -> Study:
 
 
 def _correlated(study: Study, one: str, other: str, value: float, sofar: Mapping[str, Drawn]) -> dict[str, Drawn]:
-    plan = getattr(study.grow, "plan", None)
-    if plan is None:
+    if not isinstance(study.grow, Planner):
         raise ScenarioError("this study is no plan", where="--range", remedy="Only plans have correlations to vary.")
+    plan = study.grow.plan
     for first, second in ((one, other), (other, one)):
         column = sofar.get(first, plan.columns.get(first))
         if isinstance(column, Drawn):
@@ -199,7 +219,7 @@ def _correlated(study: Study, one: str, other: str, value: float, sofar: Mapping
     )
 
 
-def _at(world: World, corner: Mapping[str, float]) -> World:
+def _moved_world(world: World, corner: Mapping[str, float]) -> World:
     stack = []
     for departure, severity in world.stack:
         value = corner.get(departure.kind, severity)

@@ -10,16 +10,37 @@ from withstand.procedures.classical import KnownWeights, Ols
 from withstand.procedures.sandwich import Hc0, Hc1, Hc2, Hc2Bm, Hc3, Hc4, Hc4m, Hc5
 from withstand.procedures.hac import Hac, HacCosine
 from withstand.procedures.cluster import Cr0, Cr1, Cr2
+from withstand.procedures.fitted_weights import FittedWeights, FittedWeightsHc3
+from withstand.procedures.prais_winsten import Gls, PraisWinsten
+from withstand.procedures.m_estimates import Bisquare, Huber
+from withstand.procedures.bootstrap import WildBootstrap
+from withstand.procedures.cluster_bootstrap import WildClusterBootstrap
+from withstand.procedures.resampling import PairsBootstrap, ResidualBootstrap
+from withstand.procedures.permutation import Permutation
+from withstand.procedures.transforms import BoxCox, LogResponse, SqrtResponse
+from withstand.procedures.glm import GammaLog, PoissonLog
+from withstand.procedures.add_square import AddSquare
+from withstand.procedures.drop_outliers import DropOutliers
+from withstand.procedures.custom import Custom
 
 # isort: on
 from withstand.procedures.base import REGISTRY, Answer, LinearProcedure, Procedure, make_procedure
 
 __all__ = [
     "REGISTRY",
+    "AddSquare",
     "Answer",
+    "Bisquare",
+    "BoxCox",
     "Cr0",
     "Cr1",
     "Cr2",
+    "Custom",
+    "DropOutliers",
+    "FittedWeights",
+    "FittedWeightsHc3",
+    "GammaLog",
+    "Gls",
     "Hac",
     "HacCosine",
     "Hc0",
@@ -30,9 +51,19 @@ __all__ = [
     "Hc4",
     "Hc4m",
     "Hc5",
+    "Huber",
     "KnownWeights",
     "LinearProcedure",
+    "LogResponse",
     "Ols",
+    "PairsBootstrap",
+    "Permutation",
+    "PoissonLog",
+    "PraisWinsten",
     "Procedure",
+    "ResidualBootstrap",
+    "SqrtResponse",
+    "WildBootstrap",
+    "WildClusterBootstrap",
     "make_procedure",
 ]

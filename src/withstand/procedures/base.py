@@ -44,6 +44,12 @@ class Procedure(ABC):
     title: ClassVar[str]
     formula: ClassVar[str]
     source: ClassVar[str]
+    null: ClassVar[str] = "the focal quantity has the stated value"
+    """Null hypothesis of its test, in words."""
+
+    target: ClassVar[str] = "coefficients of the mean of the response"
+    """What it estimates, in words."""
+
     equivariant: ClassVar[bool] = True
     """Whether adding X beta to the response adds beta to the estimate and scaling the response scales it, so that one block
     of errors gives coverage, size and power."""
@@ -56,6 +62,11 @@ class Procedure(ABC):
         """Name, with every option that is not at its default."""
         changed = [f"{f.name}={getattr(self, f.name)}" for f in fields(self) if getattr(self, f.name) != f.default]
         return f"{self.name}({', '.join(changed)})" if changed else self.name
+
+    @property
+    def key(self) -> str:
+        """What stored results are filed under: the identity, unless something behind it can change."""
+        return self.identity
 
     def not_applicable(self, design: Design, focus: Focus) -> str | None:
         """Why the procedure has no answer for this focus on this design, 'because' included; None if it has."""

@@ -65,14 +65,20 @@ def _bounds(view: View, measure: str) -> tuple[float, float] | None:
 
 
 def _series(view: View, axis: Axis, procedure: str, focus: str, measure: str) -> list[tuple[float, Reading]]:
-    """Readings along the ladder by place: 0 is the baseline, then one step a severity."""
-    start = view.baseline(procedure, focus, measure)
-    found = [] if start is None else [(0.0, start)]
-    for step, (severity, _) in enumerate(view.ladders[axis], 1):
+    """Readings along the ladder by place; the baseline stands where nothing is wrong."""
+    found = []
+    for place, severity in enumerate(_rungs(view, axis)):
         reading = view.reading(axis, severity, procedure, focus, measure)
+        if reading is None and severity == view.neutral(axis):
+            reading = view.baseline(procedure, focus, measure)
         if reading is not None:
-            found.append((float(step), reading))
-    return found if any(place > 0.0 for place, _ in found) else []
+            found.append((float(place), reading))
+    return found if len(found) > 1 else []
+
+
+def _rungs(view: View, axis: Axis) -> list[float]:
+    """Severities tried, and neutral, in increasing order."""
+    return sorted({view.neutral(axis), *(severity for severity, _ in view.ladders[axis])})
 
 
 def _series_of_any(view: View, axis: Axis, focus: str, measure: str) -> bool:
@@ -94,9 +100,9 @@ def _nominal(view: View, measure: str) -> float:
 def _draw_panel(
     panel: Axes, view: View, axis: Axis, focus: str, measure: str, colours: dict[str, int], bounds: tuple[float, float] | None
 ) -> None:
-    ladder = view.ladders[axis]
-    words = SeverityWords.of(ladder)
-    last = len(ladder)
+    rungs, neutral = _rungs(view, axis), view.neutral(axis)
+    words = SeverityWords.of(view.ladders[axis])
+    last = len(rungs) - 1
     if bounds is not None:
         panel.axhspan(*(float(style.stretched(bound)) for bound in bounds), color=style.ZONE, linewidth=0, zorder=0)
     panel.axhline(float(style.stretched(_nominal(view, measure))), color="#7f9a86", linewidth=0.6, zorder=1)
@@ -111,7 +117,7 @@ def _draw_panel(
         _draw_line(panel, places, heights, [reading for _, reading in series], colours[procedure])
     _mark_allowed(panel, view, axis, focus)
     panel.set_xlim(-0.2, last + 0.25)
-    panel.set_xticks(range(last + 1), ["none", *(words.figure(severity) for severity, _ in ladder)])
+    panel.set_xticks(range(last + 1), ["none" if severity == neutral else words.figure(severity) for severity in rungs])
     panel.set_xlabel(style.drawable(words.axis, 40), labelpad=1.5)
     panel.set_title(style.drawable(view.name(axis), 31, 2), pad=6.0)
 
@@ -134,9 +140,9 @@ def _draw_line(panel: Axes, places: np.ndarray, heights: np.ndarray, readings: l
 def _mark_allowed(panel: Axes, view: View, axis: Axis, focus: str) -> None:
     """A bar along the severities that the residuals allow."""
     row = next((found for name in view.procedures if (found := view.tipping(axis, name, focus)) is not None), None)
-    if row is None or not (math.isfinite(row.plausible_low) and math.isfinite(row.plausible_high)):
+    if row is None or math.isnan(row.plausible_low) or math.isnan(row.plausible_high):
         return
-    severities = [view.neutral(axis), *(severity for severity, _ in view.ladders[axis])]
+    severities = _rungs(view, axis)
     low, high = (
         float(place) for place in np.interp([row.plausible_low, row.plausible_high], severities, range(len(severities)))
     )

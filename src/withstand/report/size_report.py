@@ -12,7 +12,7 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from matplotlib.ticker import NullLocator
 
-from withstand.lab.sizing import CURVE_COLUMNS, ProcedureSize, SizeAnswer
+from withstand.lab.size_answer import CURVE_COLUMNS, ProcedureSize, SizeAnswer
 from withstand.report import style
 from withstand.report.figures import as_png, as_svg
 from withstand.report.files import write_files
@@ -180,7 +180,7 @@ def size_markdown(answer: SizeAnswer, extra: Sequence[str] = ()) -> str:
 def _cell(table: pd.DataFrame, n: int, measure: str) -> str:
     if n not in table.index:
         return "–"
-    row = table.loc[n]
+    row = {str(name): value for name, value in table.loc[[n]].to_dict("records")[0].items()}
     value, reach = float(row["value"]), 1.96 * float(row["mc_se"])
     bounds = [bound for bound in (float(row["needed_low"]), float(row["needed_high"])) if math.isfinite(bound)]
     told = f"{percent(value, bounds)} %" if measure in _SHARES else number(value)

@@ -128,12 +128,15 @@ class View:
 
     @cached_property
     def ladders(self) -> dict[Axis, list[tuple[float, str]]]:
-        """Severities tried with their labels, least severe first, by axis in the order of the run."""
+        """Severities tried with their labels in increasing order, by axis in the order of the run.
+
+        Those below neutral are the departure turned round.
+        """
         found: dict[Axis, dict[float, str]] = {}
         for row in self._of_this_size(self.outcome.measures):
             if row.departure != NOTHING:
                 found.setdefault(_axis(row), {})[float(row.severity)] = str(row.severity_label)
-        return {axis: sorted(rungs.items(), key=lambda rung: abs(rung[0])) for axis, rungs in found.items()}
+        return {axis: sorted(rungs.items()) for axis, rungs in found.items()}
 
     def _of_this_size(self, table: pd.DataFrame) -> Iterable[Any]:
         return table[table["n"] == self.n].itertuples(index=False)
@@ -177,20 +180,12 @@ class View:
     def tipping(self, axis: Axis, procedure: str, focus: str) -> Any | None:
         """The row of tipping severities, as a named tuple; None where there is none.
 
-        A table without a `stack` column speaks of the departure alone wherever that was tried alone.
+        Of two rows, one for each direction, the first: that of the worst severity.
         """
-        stacked = "stack" in self.outcome.tipping.columns
-        alone = Axis(axis.departure, axis.along, "")
-        if not stacked and axis != alone and (alone in self.ladders or self._stacks(alone) > 1):
-            return None
         for row in _rows(self.outcome.tipping):
-            at = (str(row.departure), _text(row.along), row.procedure, row.focus)
-            if at == (axis.departure, axis.along, procedure, focus) and (not stacked or _text(row.stack) == axis.stack):
+            if (_axis(row), row.procedure, row.focus) == (axis, procedure, focus):
                 return row
         return None
-
-    def _stacks(self, alone: Axis) -> int:
-        return sum((axis.departure, axis.along) == (alone.departure, alone.along) for axis in self.ladders)
 
     def worst(self, axis: Axis, focus: str) -> float:
         """The severity to compare procedures at: the worst that the ranking names and the table has, else the last tried."""
@@ -205,15 +200,11 @@ class View:
         if axis == BASELINE:
             return "nothing wrong"
         facts: Mapping[str, Any] = self.outcome.facts
-        if axis.departure == "clusters" and facts.get("groups"):
-            told = f"{axis.departure} by {facts['groups']}"
-        elif axis.departure == "serial" and not axis.along and facts.get("order"):
-            told = f"{axis.departure} along {facts['order']}"
-        elif axis.along and " along " not in axis.departure:
-            told = f"{axis.departure} along {axis.along}"
-        else:
-            told = axis.departure
-        return f"{told} with {axis.stack}" if axis.stack else told
+        for told in facts.get("axes", []):
+            if Axis(told["departure"], told["along"], told["stack"]) == axis:
+                return str(told["name"])
+        along = f" along {axis.along}" if axis.along and " along " not in axis.departure else ""
+        return f"{axis.departure}{along}{f' with {axis.stack}' if axis.stack else ''}"
 
     def neutral(self, axis: Axis) -> float:
         """The severity at which the assumption holds."""

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
-from withstand.report.view import Axis, View
+from withstand.report.view import Axis, Reading, View
 from withstand.report.words import SeverityWords, percent, share, short_share, times
 
 CLOSE = 0.02
@@ -84,26 +84,40 @@ def turning(view: View, axis: Axis, procedure: str, focus: str) -> str:
     row = view.tipping(axis, procedure, focus)
     if row is not None:
         tipping, last, first = float(row.tipping), float(row.last_holds), float(row.first_gives)
+    neutral = view.neutral(axis)
+    if first == neutral:
+        return "gives even when nothing is wrong"
+    # Below neutral the departure is turned round, and severities fall as it gets worse.
+    turned = next((s for s in (first, tipping, last) if math.isfinite(s)), neutral) < neutral
+    down = " down" if turned else ""
     if math.isfinite(first):
-        if math.isfinite(last) and last < first and first - last > CLOSE * abs(first):
+        if math.isfinite(last) and (last > first if turned else last < first) and abs(first - last) > CLOSE * abs(first):
             return f"gives between {words.label(last)} and {words.label(first)}"
-        return f"gives from {words.label(tipping if math.isfinite(tipping) else first)}"
+        return f"gives from {words.label(tipping if math.isfinite(tipping) else first)}{down}"
     if math.isfinite(tipping):
-        return f"gives from {words.label(tipping)}"
-    if not any(verdicts.values()) and row is None:
+        return f"gives from {words.label(tipping)}{down}"
+    if not any(verdicts.values()) and not math.isfinite(last):
         return "not judged"
     if not math.isfinite(last):
         return "unsettled"
-    beyond = "the most tried" if last >= ladder[-1][0] else "unsettled beyond"
-    return f"holds to {words.label(last)}, {beyond}"
+    farthest = last <= ladder[0][0] if turned else last >= ladder[-1][0]
+    return f"holds{down} to {words.label(last)}, {'the most tried' if farthest else 'unsettled beyond'}"
 
 
 def allowed(view: View, axis: Axis, procedure: str, focus: str) -> str:
     """The plausible severities; empty where the residuals do not say."""
     row = view.tipping(axis, procedure, focus)
-    if row is None or not (math.isfinite(row.plausible_low) and math.isfinite(row.plausible_high)):
+    if row is None or math.isnan(row.observed):
         return ""
-    return SeverityWords.of(view.ladders[axis]).span(float(row.plausible_low), float(row.plausible_high))
+    low, high = float(row.plausible_low), float(row.plausible_high)
+    words = SeverityWords.of(view.ladders[axis])
+    if math.isnan(low) or math.isnan(high):
+        return "none that was tried"
+    if math.isinf(low) and math.isinf(high):
+        return "any that was tried"
+    if math.isinf(low):
+        return f"{words.label(high)} or less"
+    return f"{words.label(low)} or more" if math.isinf(high) else words.span(low, high)
 
 
 def _verdict(view: View, axis: Axis, procedure: str, focus: str) -> str:
@@ -119,13 +133,20 @@ def _covers(view: View, axis: Axis, procedure: str, focus: str, words: SeverityW
     severity = view.worst(axis, focus) if row is None else float(row.worst_severity)
     label = words.label(severity) if row is None else str(row.worst_label)
     bounds = view.bounds or ()
-    reading = view.reading(axis, severity, procedure, focus, "coverage")
+    where = "with nothing wrong" if severity == view.neutral(axis) else f"at {label}"
+    reading = _reading(view, axis, severity, procedure, focus, "coverage")
     if reading is not None:
-        return f"{short_share(reading, bounds)} % at {label}{' (exact)' if reading.exact else ''}"
+        return f"{short_share(reading, bounds)} % {where}{' (exact)' if reading.exact else ''}"
     if row is None or math.isnan(row.coverage_there):
-        size = view.reading(axis, severity, procedure, focus, "size")
-        return "no interval" if size is None else f"size {share(size)} at {label}"
-    return f"{percent(float(row.coverage_there), bounds)} % at {label}{' (exact)' if row.method == 'exact' else ''}"
+        size = _reading(view, axis, severity, procedure, focus, "size")
+        return "no interval" if size is None else f"size {share(size)} {where}"
+    return f"{percent(float(row.coverage_there), bounds)} % {where}{' (exact)' if row.method == 'exact' else ''}"
+
+
+def _reading(view: View, axis: Axis, severity: float, procedure: str, focus: str, measure: str) -> Reading | None:
+    if severity == view.neutral(axis):
+        return view.baseline(procedure, focus, measure)
+    return view.reading(axis, severity, procedure, focus, measure)
 
 
 def _rows(row: object) -> str:

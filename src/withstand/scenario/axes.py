@@ -6,9 +6,9 @@ from collections.abc import Sequence
 from typing import Any
 
 from withstand.departures import REGISTRY, Departure
-from withstand.departures.worst_fan import WorstFan
-from withstand.errors import InputError, ScenarioError, nearest
+from withstand.errors import InputError, ScenarioError
 from withstand.lab.plan import Axis
+from withstand.scenario.choices import fitting, stackable
 from withstand.scenario.options import given_options
 from withstand.scenario.schema import CompanionPart, DeparturePart
 from withstand.scenario.source import KeyPath, Source
@@ -36,53 +36,21 @@ def axes_of(entries: Sequence[DeparturePart], study: Study, source: Source) -> t
                     remedy="Give one number, as in severity = 1.",
                 )
             companions.append((companion, companion.ladder[0]))
-        axes.append(Axis(_departure(entry, study, source, ("departure", place)), tuple(companions)))
+        axis = Axis(_departure(entry, study, source, ("departure", place)), tuple(companions))
+        try:
+            axes.append(stackable(axis))
+        except InputError as error:
+            raise source.relocate(error, ("departure", place)) from error
     return tuple(axes)
 
 
 def _departure(part: DeparturePart | CompanionPart, study: Study, source: Source, path: KeyPath) -> Departure:
     try:
-        made = bound(make_departure(part.kind, given_options(part, skip=("kind", "companions"))), study)
-        reason = made.not_applicable(study.design)
+        return fitting(make_departure(part.kind, given_options(part, skip=("kind", "companions"))), study)
     except InputError as error:
         raise source.relocate(error, path) from error
-    if reason is not None:
-        why, _, remedy = reason.removeprefix("not applicable, because ").partition("; ")
-        raise ScenarioError(
-            f"'{made.name}' makes no sense here: {why}",
-            where=source.where(path),
-            remedy=f"{remedy[:1].upper()}{remedy[1:]}." if remedy else "Leave it out.",
-        )
-    return made
 
 
 def make_departure(kind: str, options: dict[str, Any]) -> Departure:
     """A departure of a known kind from its options."""
     return REGISTRY[kind](**options)
-
-
-def bound(departure: Departure, study: Study) -> Departure:
-    """The departure with what it needs to know of the focus.
-
-    Raises
-    ------
-    ScenarioError
-        If it names a focal quantity that the study has not.
-    """
-    if not isinstance(departure, WorstFan) or departure.row is not None:
-        return departure
-    known = {focus.name: focus for focus in study.focus if focus.scalar}
-    if not known:
-        raise ScenarioError(
-            "'worst-fan' acts against one number, and the focus has joint terms only",
-            where="departure.against",
-            remedy="Add a coefficient, a contrast, a mean or a new response to the focus.",
-        )
-    against = departure.against or next(iter(known))
-    if against not in known:
-        raise ScenarioError(
-            f"'worst-fan' acts against '{against}', which is no focal quantity",
-            where="departure.against",
-            remedy=nearest(against, known),
-        )
-    return departure.for_focus(known[against])

@@ -47,7 +47,7 @@ def complaint(error: ValidationError, raw: Mapping[str, Any], source: Source) ->
     paths = [path for path in found if not any(other[: len(path)] == path and len(other) > len(path) for other in found)]
     path = _first(paths, found)
     what, remedy = _said(path, found[path], raw)
-    more = len(paths) - 1
+    more = sum(other != path and not _explained(other, path, found) for other in paths)
     if more:
         remedy += f" ({more} more {'key needs' if more == 1 else 'keys need'} mending.)"
     return ScenarioError(what, where=source.where(path), remedy=remedy)
@@ -77,6 +77,12 @@ def _first(paths: list[KeyPath], found: Mapping[KeyPath, list[Any]]) -> KeyPath:
     return path
 
 
+def _explained(other: KeyPath, told: KeyPath, found: Mapping[KeyPath, list[Any]]) -> bool:
+    """Whether a missing key is the one that was misspelt."""
+    kinds = found[other][0]["type"], found[told][0]["type"]
+    return other[:-1] == told[:-1] and kinds == ("missing", "extra_forbidden")
+
+
 def _said(path: KeyPath, details: list[Any], raw: Mapping[str, Any]) -> tuple[str, str]:
     """What is wrong, and the remedy."""
     # A value of the right form with the wrong content says more than the forms that it has not.
@@ -95,6 +101,11 @@ def _said(path: KeyPath, details: list[Any], raw: Mapping[str, Any]) -> tuple[st
         tag, known = context["discriminator"].strip("'"), re.findall(r"'([^']*)'", context["expected_tags"])
         word = "departure" if tag == "kind" else "procedure"
         return f"unknown {word} '{context['tag']}'", nearest(str(context["tag"]), known)
+    if path == ("departure",) and isinstance(given, dict):
+        return "departure is one table, not a list of tables", "Write its header with double brackets: [[departure]]."
+    if kind == "literal_error" and context["expected"] in ("True", "False"):
+        also = [_KINDS[name] for name in dict.fromkeys(_form(detail["type"]) for detail in details) if name in _KINDS]
+        return f"{key} is {_shown(given)}", f"It must be {' or '.join([*also, context['expected'].lower()])}."
     if kind == "literal_error":
         known = re.findall(r"'([^']*)'", context["expected"])
         if isinstance(given, str) and known:
@@ -135,4 +146,4 @@ def _shown(value: Any) -> str:
         return "a table"
     if isinstance(value, list):
         return f"the list {value}"
-    return f"{value:g}" if isinstance(value, float) else str(value)
+    return str(value)

@@ -25,7 +25,7 @@ from withstand.departures import (
 from withstand.departures.along import FITTED
 from withstand.lab.plan import Axis
 from withstand.procedures.base import REGISTRY, Procedure, make_procedure
-from withstand.scenario.axes import bound
+from withstand.scenario.choices import bound
 from withstand.study.study import Study
 
 MOST_DEPARTURES = 14

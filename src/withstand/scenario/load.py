@@ -14,19 +14,15 @@ from withstand.judgement.tolerance import Tolerance
 from withstand.lab.plan import Plan
 from withstand.procedures.base import Procedure, make_procedure
 from withstand.scenario.axes import axes_of
+from withstand.scenario.choices import MOST, answering
 from withstand.scenario.complaints import complaint
 from withstand.scenario.defaults import default_axes, default_procedures
 from withstand.scenario.options import given_options
 from withstand.scenario.plans import study_of_plan
 from withstand.scenario.schema import ProceduresPart, Scenario, SimulationPart, StudyPart, TolerancePart
-from withstand.scenario.source import KeyPath, Source
-from withstand.study.build import study_from_frame
+from withstand.scenario.source import Source
 from withstand.study.study import Study
 from withstand.study.table import read_table
-
-MOST = 160_000
-"""Replicates a simulated cell gets at most, where the scenario does not say."""
-
 
 @dataclass(frozen=True, eq=False)
 class Loaded:
@@ -103,7 +99,7 @@ def load(
     except InputError as error:
         raise source.relocate(error) from error
     study = replace(study, notices=(*study.notices, *notices))
-    return Loaded(name, study, plan, _record(values, source))
+    return Loaded(name, study, plan, _record(values, source, study.name))
 
 
 def _overridden(raw: Mapping[str, Any], overrides: Mapping[str, Mapping[str, Any]]) -> dict[str, Any]:
@@ -122,8 +118,15 @@ def _study(scenario: Scenario, source: Source, name: str) -> Study:
         return study_of_plan(part, part.plan, title, source, scenario.simulation.seed)
     if part.data is None:
         raise ScenarioError("it names neither data nor a plan", where="study.data", remedy='Add data = "table.csv".')
-    frame = read_table(source.folder / part.data, decimal=part.decimal)
-    return study_from_frame(frame, part.model, name=title, **common_options(part))
+    table = source.folder / part.data
+    frame = read_table(table, decimal=part.decimal)
+    try:
+        return Study.from_frame(frame, part.model, name=title, **common_options(part))
+    except InputError as error:
+        if not error.where.startswith("row "):
+            raise
+        # A frame does not know which file it came from.
+        raise type(error)(error.what, where=f"{table}, {error.where}", remedy=error.remedy) from error
 
 
 def common_options(part: StudyPart) -> dict[str, Any]:
@@ -143,20 +146,12 @@ def common_options(part: StudyPart) -> dict[str, Any]:
 def _procedures(part: ProceduresPart, study: Study, source: Source) -> tuple[Procedure, ...]:
     made = []
     for place, entry in enumerate(part.use):
-        path: KeyPath = ("procedures", "use", place)
         try:
             procedure = make_procedure(entry) if isinstance(entry, str) else make_procedure(entry.name, **given_options(entry, ["name"]))
+            made.append(answering(procedure, study))
         except InputError as error:
-            raise type(error)(error.what, where=source.where(path), remedy=error.remedy) from error
-        reasons = [procedure.not_applicable(study.design, focus) for focus in study.focus]
-        if reasons[0] is not None and None not in reasons:
-            why = reasons[0].removeprefix("not applicable, because ")
-            raise ScenarioError(
-                f"'{procedure.identity}' has no answer for this study: {why}",
-                where=source.where(path),
-                remedy="Leave it out, or name another; `withstand list procedures` shows them.",
-            )
-        made.append(procedure)
+            where = source.where(("procedures", "use", place))
+            raise type(error)(error.what, where=where, remedy=error.remedy) from error
     return tuple(made)
 
 
@@ -180,10 +175,10 @@ def _tolerance(part: TolerancePart) -> Tolerance:
     return Tolerance(size, bias, part.bias_absolute, part.tails)
 
 
-def _record(values: Mapping[str, Any], source: Source) -> dict[str, Any]:
+def _record(values: Mapping[str, Any], source: Source, title: str) -> dict[str, Any]:
     study = dict(values["study"])
     if "data" in study:
         study["data"] = str((source.folder / study["data"]).resolve())
     if "pilot" in study.get("plan", {}):
         study["plan"] = {**study["plan"], "pilot": str((source.folder / study["plan"]["pilot"]).resolve())}
-    return {**values, "study": study}
+    return {"title": title, **values, "study": study}

@@ -72,10 +72,11 @@ class PlanPart(Part):
 
     @model_validator(mode="before")
     @classmethod
-    def _draw_in_its_place(cls, given: Any) -> Any:
+    def _draw_among_columns(cls, given: Any) -> Any:
+        """In TOML, a key below the header of the columns is one of them; text can only be meant for the plan."""
         columns = given.get("columns") if isinstance(given, dict) else None
-        if isinstance(columns, dict) and isinstance(columns.get("draw"), str):
-            raise ValueError("'draw' stands among the columns; move it up, above [study.plan.columns]")
+        if isinstance(columns, dict) and isinstance(columns.get("draw"), str) and "draw" not in given:
+            return {**given, "draw": columns["draw"], "columns": {k: v for k, v in columns.items() if k != "draw"}}
         return given
 
     @model_validator(mode="after")

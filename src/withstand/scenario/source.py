@@ -116,7 +116,7 @@ class Source:
         if error.where and not _DOTTED.fullmatch(error.where):
             return error
         path: KeyPath = tuple(error.where.split(".")) if error.where else entry
-        if entry and path[0] == entry[0]:
+        if error.where and entry and path[0] == entry[0]:
             path = (*entry, *path[1:])
         return type(error)(error.what, where=self.where(path), remedy=error.remedy)
 

@@ -259,7 +259,7 @@ def _order_notices(order: np.ndarray, groups: np.ndarray | None, name: str) -> l
     apart = gaps[gaps > 0.0]
     if apart.size and apart.max() > 1.000001 * apart.min():
         notices.append(
-            f"the spacing of '{name}' runs from {apart.min():g} to {apart.max():g}; serial correlation uses the gaps as they are"
+            f"'{name}' has a spacing from {apart.min():g} to {apart.max():g}; serial correlation uses the gaps as they are"
         )
     return notices
 

@@ -288,3 +288,22 @@ def spread_evenly(probabilities: Floats, n: int) -> Ints:
 
 def _where(name: str, key: str) -> str:
     return f"study.plan.columns.{name}.{key}"
+
+
+def labels_of(name: str, column: PlannedColumn) -> tuple[str, ...]:
+    """The labels of a numeric column that stands in C(): all values it can take.
+
+    Raises
+    ------
+    ScenarioError
+        If there is no list of them.
+    """
+    if isinstance(column, Levels):
+        values = sorted(float(level) for level in column.levels)
+    elif isinstance(column, Drawn) and column.law == "integers" and column.low is not None and column.high is not None:
+        values = [float(value) for value in range(int(column.low), int(column.high) + 1)]
+    else:
+        raise ScenarioError(
+            f"'{name}' stands in C() and has no fixed values", where="study.model", remedy="Give it levels, integers or shares."
+        )
+    return tuple(f"{value:.15g}" for value in values)

@@ -79,8 +79,8 @@ class Stack(Growth):
         """See Growth."""
         unit = "groups" if self.study.design.groups is not None else "rows"
         return (
-            f"More rows are whole copies of the {self.study.n} there are, then a remainder of {unit} taken evenly over the cells "
-            f"and the range of the fitted mean. {COPIES}"
+            f"More rows are whole copies of the {self.study.n} there are, then a remainder of {unit} taken evenly over the "
+            f"cells and the range of the fitted mean. {COPIES}"
         )
 
     def at(self, n: int) -> Study:
@@ -127,8 +127,8 @@ class Resample(Growth):
         """See Growth."""
         unit = "groups" if self.study.design.groups is not None else "rows"
         return (
-            f"The rows of each block of replicates are drawn anew, whole {unit} with replacement from the {self.study.n} there are. "
-            "No value is new, so the farthest row stays the farthest however many are drawn."
+            f"The rows of each block of replicates are drawn anew, whole {unit} with replacement from the {self.study.n} there "
+            "are. No value is new, so the farthest row stays the farthest however many are drawn."
         )
 
     def at(self, n: int) -> Study:
@@ -155,8 +155,8 @@ class Extend(Growth):
     def sentence(self) -> str:
         """See Growth."""
         return (
-            f"A longer series repeats the {self.study.n} rows of predictors from the first on, while the order column goes on with "
-            f"its own spacing; a shorter one is the beginning. {COPIES}"
+            f"A longer series repeats the {self.study.n} rows of predictors from the first on, while the order column goes on "
+            f"with its own spacing; a shorter one is the beginning. {COPIES}"
         )
 
     def at(self, n: int) -> Study:

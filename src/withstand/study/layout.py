@@ -220,5 +220,5 @@ def _root(R: Floats, complaint: str) -> Floats:
 
 def _filled(codes: Ints, levels: tuple[float, ...] | tuple[str, ...]) -> object:
     if isinstance(levels[0], str):
-        return pd.Categorical.from_codes(codes.tolist(), categories=list(levels))
+        return pd.Categorical.from_codes(codes, categories=pd.Index([str(level) for level in levels]))
     return np.asarray(levels, dtype=float)[codes]

@@ -74,7 +74,8 @@ class Pilot:
         for name in names:
             column = self.frame[name]
             if not pd.api.types.is_numeric_dtype(column) or pd.api.types.is_bool_dtype(column):
-                shares = column.astype(str).value_counts(normalize=True, sort=False)
+                # In the order in which a table of data has its levels.
+                shares = column.astype(str).value_counts(normalize=True).sort_index()
                 found[name] = Shares({str(level): float(share) for level, share in shares.items()})
                 continue
             values = np.asarray(column, dtype=float)

@@ -1,4 +1,4 @@
-"""A study without data: a table laid out by a plan, stated coefficients, and an error SD stated or worked out."""
+"""A plan: what will be collected, and what is thought to be true."""
 
 from __future__ import annotations
 
@@ -11,28 +11,9 @@ from types import MappingProxyType
 from typing import Literal
 
 from withstand.errors import ScenarioError
-from withstand.study.columns import Blocks, Drawn, InSequence, Levels, PlannedColumn, Shares
+from withstand.study.columns import PlannedColumn
 from withstand.study.layout import Layout
 from withstand.study.pilot import Pilot
-
-__all__ = [
-    "Blocks",
-    "Drawn",
-    "InSequence",
-    "Levels",
-    "Pilot",
-    "PlannedColumn",
-    "Shares",
-    "StudyPlan",
-    "planned_study",
-    "replanned",
-]
-
-_SHOWN_STREAM = 3000
-"""Separates the table that is shown from those drawn in blocks."""
-
-_TABLES_FOR_VARIANCE = 100
-"""Tables over which the variance of the mean is averaged where R squared is given."""
 
 
 @dataclass(frozen=True)
@@ -52,7 +33,7 @@ class StudyPlan:
     r_squared : float, optional
         Share of the variance of the response that the model explains, in place of `error_sd`.
     pilot : Pilot, optional
-        A small table that gives the error SD, in its place; coefficients not named are those fitted to it.
+        A small table that gives the error SD, in its place; coefficients and columns not named are read off it.
     draw : {"fresh", "once"}
         Whether random columns are drawn anew in each block of replicates.
     attrition : float
@@ -101,7 +82,8 @@ class StudyPlan:
                 raise ScenarioError(
                     f"the coefficient of '{name}' is {value:g}", where="study.plan.coefficients", remedy="Give a number."
                 )
-        self.layout  # noqa: B018  # checks the columns
+        if self.columns or self.pilot is None:
+            self.layout  # noqa: B018  # checks the columns
 
     @cached_property
     def layout(self) -> Layout:

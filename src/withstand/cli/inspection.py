@@ -1,0 +1,58 @@
+"""What `inspect` prints: the design and the fit, then what is known without simulation."""
+
+from __future__ import annotations
+
+import textwrap
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+from withstand.lab.outcome import Outcome
+from withstand.report.account import estimate_sentence
+from withstand.report.html import fact_tables, study_facts
+from withstand.report.screen import WIDTH, screen
+from withstand.report.view import View
+from withstand.report.words import number
+
+
+def inspection(outcome: Outcome) -> list[str]:
+    """Lines for a terminal.
+
+    Parameters
+    ----------
+    outcome : Outcome
+        Of a run without simulation.
+    """
+    view = View(outcome)
+    lines = ["Design and fit", *_pairs(study_facts(view))]
+    for table in fact_tables(view):
+        lines += ["", table.caption, *_columns([table.columns, *([cell.text for cell in row] for row in table.rows)])]
+    lines += ["", "What collinearity costs", *_collinearity(outcome.facts)]
+    told = [(focus, estimate_sentence(view, focus)) for focus in view.foci]
+    lines += ["", "Focus", *_pairs([(focus, sentence) for focus, sentence in told if sentence])]
+    return [*lines, "", *screen(outcome).splitlines()]
+
+
+def _collinearity(facts: Mapping[str, Any]) -> list[str]:
+    """The factor by which each focal interval is wider than it would be with uncorrelated columns."""
+    told = [
+        f"The interval for {name} is {number(factor)} times as wide as it would be with uncorrelated columns."
+        for name, factor in facts["widening"].items()
+    ]
+    return [line for one in told for line in textwrap.wrap(one, WIDTH, initial_indent="  ", subsequent_indent="    ")]
+
+
+def _pairs(pairs: Sequence[tuple[str, str]]) -> list[str]:
+    width = max((len(name) for name, _ in pairs), default=0)
+    lines = []
+    for name, value in pairs:
+        indent = " " * (width + 4)
+        lines += textwrap.wrap(f"  {name.ljust(width)}  {value}", max(WIDTH, width + 40), subsequent_indent=indent)
+    return lines
+
+
+def _columns(rows: Sequence[Sequence[str]]) -> list[str]:
+    widths = [max(len(row[place]) for row in rows) for place in range(len(rows[0]))]
+    return [
+        "  " + "  ".join(cell.ljust(width) if place == 0 else cell.rjust(width) for place, (cell, width) in enumerate(zip(row, widths, strict=True)))
+        for row in rows
+    ]

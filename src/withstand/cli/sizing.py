@@ -1,0 +1,146 @@
+"""The command `size`: how many rows, the same over ranges of uncertain inputs, and what given numbers of rows buy."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from contextlib import closing
+from dataclasses import fields
+from pathlib import Path
+from typing import Any
+
+import click
+
+from withstand.cli.bars import Bars
+from withstand.cli.inputs import loaded_from
+from withstand.cli.running import cores, default_folder
+from withstand.cli.speech import records, say_json
+from withstand.cli.state import State
+from withstand.departures import Departure, departure_class
+from withstand.errors import InputError, ScenarioError
+from withstand.front.sizing import find_size, rows_buy, several_procedures, size_at_corners
+from withstand.lab.plan import Axis
+from withstand.lab.size_answer import SizeAnswer
+from withstand.lab.size_plan import Effort, Targets
+from withstand.report.size_report import write_size_report
+from withstand.report.words import number
+from withstand.scenario.choices import fitting
+from withstand.scenario.load import Loaded
+from withstand.study.study import Study
+
+
+def size_input(
+    state: State, input_path: Path, *, departures: Sequence[str], severities: Sequence[float], along: str | None,
+    together: bool, procedures: Sequence[str], ranges: Sequence[str], at: Sequence[int], power: float | None,
+    half_width: float | None, only: bool, largest: int, growth: str | None, on: str | None, out: Path | None,
+    workers: int | None, quiet: bool, as_json: bool, **options: Any,
+) -> None:  # fmt: skip
+    """Answer the question and write size.md, size.csv and the figure."""
+    loaded = loaded_from(input_path, options)
+    study, plan = loaded.study, loaded.plan
+    axes = _axes(loaded, departures, severities, along, together)
+    chosen = several_procedures(list(procedures), study) if procedures else _own_procedures(loaded)
+    effort = Effort(plan.seed, plan.repetitions, plan.most, largest, workers=workers or cores(), method=plan.method)
+    folder = out or default_folder(loaded.name)
+    state.out = folder
+    if at:
+        _say_table(rows_buy(study, axes, chosen, effort, at, focus=on, growth=growth), quiet, as_json)
+        return
+    targets = Targets(not only, power, half_width)
+    with closing(Bars(quiet or as_json)) as bars:
+        common: dict[str, Any] = {"tolerance": plan.tolerance, "focus": on, "growth": growth, "progress": bars}
+        if ranges:
+            corners = size_at_corners(study, axes, chosen, targets, effort, _ranges(ranges), **common)
+            _say_corners(corners.sentences, corners.as_record(), corners.answers[0], folder, quiet, as_json)
+            return
+        answer = find_size(study, axes, chosen, targets, effort, **common)
+    written = write_size_report(answer, folder)
+    if as_json:
+        say_json(answer.as_record() | {"files": [str(path) for path in written]})
+    elif not quiet:
+        _say_answer(study, answer, written)
+
+
+def _axes(
+    loaded: Loaded, departures: Sequence[str], severities: Sequence[float], along: str | None, together: bool
+) -> tuple[Axis, ...]:
+    """The worlds asked about: those of the options, else those the scenario names, else nothing wrong."""
+    if not departures:
+        if severities or along or together:
+            raise click.UsageError("--severity, --along and --together go with --departure")
+        return loaded.plan.axes if "departure" in loaded.record else ()
+    if len(severities) != len(departures):
+        ladder = ", ".join(f"{value:g}" for value in departure_class(departures[0]).default_ladder)
+        raise click.UsageError(
+            f"{len(departures)} --departure and {len(severities)} --severity; give one severity for each, such as "
+            f"--departure {departures[0]} --severity 2 (usual for it: {ladder})"
+        )
+    made = [_departure(kind, severity, along, loaded.study) for kind, severity in zip(departures, severities, strict=True)]
+    if together:
+        (first, *rest) = made
+        return (Axis(first, tuple((companion, companion.ladder[0]) for companion in rest)),)
+    return tuple(Axis(departure) for departure in made)
+
+
+def _departure(kind: str, severity: float, along: str | None, study: Study) -> Departure:
+    cls = departure_class(kind)
+    has_along = any(option.name == "along" for option in fields(cls))
+    try:
+        made = cls(severity, along=along) if has_along and along is not None else cls(severity)
+        return fitting(made, study)
+    except InputError as error:
+        where = f"--{error.where.removeprefix('departure.')}" if error.where.startswith("departure.") else "--departure"
+        raise type(error)(error.what, where=where, remedy=error.remedy) from error
+
+
+def _own_procedures(loaded: Loaded) -> tuple[Any, ...]:
+    """Those the scenario names; for a table the first, which is the user's own."""
+    return loaded.plan.procedures if "procedures" in loaded.record else loaded.plan.procedures[:1]
+
+
+def _ranges(given: Sequence[str]) -> dict[str, list[float]]:
+    ranges: dict[str, list[float]] = {}
+    for text in given:
+        name, _, values = text.rpartition("=")
+        try:
+            numbers = [float(value) for value in values.split(",")]
+        except ValueError:
+            numbers = []
+        if not name.strip() or not numbers or not all(map(math.isfinite, numbers)):
+            raise ScenarioError(
+                f"the range '{text}' is not a name with numbers", where="--range", remedy="Write it as in --range error_sd=2,4."
+            )
+        ranges[name.strip()] = numbers
+    return ranges
+
+
+def _say_answer(study: Study, answer: SizeAnswer, written: Sequence[Path]) -> None:
+    click.echo(f"{study.name}\nFocus: {answer.focus}. Asked: {'; '.join(answer.asked)}.\n")
+    for sentence in answer.sentences:
+        click.echo(f"* {sentence}")
+    for notice in answer.notices:
+        click.echo(f"Note: {notice}.")
+    click.echo(f"Everything that was looked at: {written[0]}")
+
+
+def _say_corners(
+    sentences: Sequence[str], corners: Any, first: SizeAnswer, folder: Path, quiet: bool, as_json: bool
+) -> None:
+    written = write_size_report(first, folder, [f"At the corners of the ranges: {' '.join(sentences)}"])
+    if as_json:
+        say_json({"sentences": list(sentences), "corners": corners, "files": [str(path) for path in written]})
+    elif not quiet:
+        click.echo(f"{first.title}\nFocus: {first.focus}. Asked: {'; '.join(first.asked)}.\n")
+        for sentence in sentences:
+            click.echo(f"* {sentence}")
+
+
+def _say_table(table: Any, quiet: bool, as_json: bool) -> None:
+    if as_json:
+        say_json(records(table))
+    elif not quiet:
+        shown = table.copy()
+        for name in shown.columns:
+            if shown[name].dtype.kind == "f":
+                shown[name] = [number(value) for value in shown[name]]
+        click.echo(shown.to_string(index=False))
