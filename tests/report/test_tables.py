@@ -1,4 +1,5 @@
 import dataclasses
+import math
 
 import pandas as pd
 import pytest
@@ -6,7 +7,7 @@ import pytest
 from withstand.report.tables import NO_VALUE, failures_table, premium_table, protection_table, turning_table, verdict_table
 from withstand.report.view import Axis, View
 from withstand.report.words import SIGNS, percent
-from withstand.report.worry import turning, worries
+from withstand.report.worry import allowed, turning, worries
 
 
 def rows(table):
@@ -127,9 +128,7 @@ def test_where_a_departure_turned_round_turns(rich, changes, told):
     turned = rich.measures.query("departure == 'fan' and along == 'dry_hours' and severity == 2").assign(
         severity=0.5, severity_label="SD ratio 0.5"
     )
-    outcome = dataclasses.replace(
-        rich, tipping=rich.tipping.assign(**changes), measures=pd.concat([rich.measures, turned])
-    )
+    outcome = dataclasses.replace(rich, tipping=rich.tipping.assign(**changes), measures=pd.concat([rich.measures, turned]))
     assert turning(View(outcome), Axis("fan", "dry_hours", ""), "ols", "dry_hours") == told
 
 

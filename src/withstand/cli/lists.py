@@ -28,7 +28,7 @@ def listing(what: str, as_json: bool) -> str:
     records = {"departures": _departures, "procedures": _procedures, "measures": _measures, "tolerances": _tolerances}[what]()
     if as_json:
         return json.dumps(records, indent=2, ensure_ascii=False)
-    return _columns([[str(cell) for cell in list(record.values())[:3]] for record in records])
+    return _lines([[str(cell) for cell in list(record.values())[:3]] for record in records])
 
 
 def _departures() -> list[dict[str, Any]]:
@@ -36,7 +36,7 @@ def _departures() -> list[dict[str, Any]]:
         {
             "kind": kind,
             "title": cls.title,
-            "severity": f"{cls.unit}: {', '.join(f'{value:.3g}' for value in cls.default_ladder)}",
+            "severity": f"Severity: {cls.unit}; usual: {', '.join(f'{value:.3g}' for value in cls.default_ladder)}",
             "unit": cls.unit,
             "default_ladder": list(cls.default_ladder),
             "layer": str(cls.layer),
@@ -76,16 +76,13 @@ def _options(cls: type) -> dict[str, str]:
     return {name: told for name, told in parameter_texts(cls).items() if name not in ("", "severity", "row", "new")}
 
 
-def _columns(rows: list[list[str]]) -> str:
-    """Aligned columns; the last one is folded to the width of a terminal."""
-    widths = [max(len(row[place]) for row in rows) for place in range(len(rows[0]) - 1)]
+def _lines(rows: list[list[str]]) -> str:
+    """A name with what is said of it, folded to the width of a terminal."""
+    width = max(len(row[0]) for row in rows) + 2
     lines = []
-    for row in rows:
-        head = "  ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=False))
-        lines += textwrap.wrap(
-            f"{head}  {row[-1]}", max(WIDTH, len(head) + 30), subsequent_indent=" " * (len(head) + 2), drop_whitespace=True,
-            break_long_words=False,
-        )
+    for name, *told in rows:
+        indent = " " * width
+        lines += textwrap.wrap(f"{name.ljust(width)}{'. '.join(told)}", WIDTH, subsequent_indent=indent, break_long_words=False)
     return "\n".join(lines)
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import multiprocessing
 import pickle
+import signal
 from collections.abc import Iterator
 from concurrent.futures import Executor, Future, ProcessPoolExecutor
 from contextlib import contextmanager
@@ -106,11 +107,17 @@ def open_executor(workers: int = 1, cluster: str | None = None) -> Iterator[Exec
         yield InProcess()
     else:
         # A fresh interpreter a worker: a forked one would inherit the state of threaded libraries.
-        pool = ProcessPoolExecutor(workers, mp_context=multiprocessing.get_context("spawn"))
+        context = multiprocessing.get_context("spawn")
+        pool = ProcessPoolExecutor(workers, mp_context=context, initializer=_leave_interrupts_to_the_driver)
         try:
             yield pool
         finally:
             pool.shutdown(wait=True, cancel_futures=True)
+
+
+def _leave_interrupts_to_the_driver() -> None:
+    """A terminal sends Ctrl-C to workers too; the driver alone ends the run, and closes them."""
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
 
 
 @contextmanager

@@ -43,7 +43,7 @@ _LOOKS = np.array([1.0, 2.0, 3.0, 4.0])
 """Bends among which a path is chosen, and the x at which they are compared."""
 
 _STEP = 0.5
-_BLOCK = 8
+_BLOCK = 14
 _BLOCKS = 40
 _LEVELS = 7
 _NEGLIGIBLE = 1e-12

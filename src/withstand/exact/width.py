@@ -14,8 +14,8 @@ from withstand.study.design import Floats
 
 _WANTED = 1e-8
 _START = -18.0
-_BLOCK = 4.0
-_BLOCKS = 14
+_BLOCK = 12.0
+_BLOCKS = 5
 _STEP = 0.8
 _LEVELS = 4
 

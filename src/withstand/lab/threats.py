@@ -112,7 +112,9 @@ class Assessment:
             worst=worst,
             tipping=tipping,
             plausible=plausible,
-            limit=self._limits.of(self.grid.plan.procedures[procedure], self.grid.study.focus[focus], axis.world(worst.severity)),
+            limit=self._limits.of(
+                self.grid.plan.procedures[procedure], self.grid.study.focus[focus], axis.world(worst.severity)
+            ),
             holding=holding,
             premium=premium,
         )

@@ -18,6 +18,11 @@ _SLACK = 1e-9
 _STILL = 1e-9
 """A row that moves by less than this share of the fastest along an edge counts as standing still."""
 
+_NUDGE = 1e-9
+"""Residuals are nudged apart by up to this share of their root mean square, so that tied rows have an order."""
+
+_GOLDEN = 0.6180339887498949
+
 
 @dataclass(eq=False)
 class Walkers:
@@ -27,35 +32,42 @@ class Walkers:
     ----------
     residuals : ndarray of shape (A, n)
         Where they stand.
-    signs : ndarray of shape (A, n)
-        Side of the fit each row counts on, +1 or -1; 0 in the rows of the basis. A row with residual 0 outside the basis keeps
-        a side, so that ties need no special case.
     directions : ndarray of shape (p, p, A)
         Column j of each matrix moves the fit along the edge that leaves row j of the basis and keeps the others fitted.
     basis : ndarray of shape (p, A)
         Rows fitted exactly; -1 where a direction is not tied to a row yet.
+    work : ndarray of shape (3, at least A, n)
+        Scratch space.
     """
 
     residuals: Floats
-    signs: Floats
     directions: Floats
     basis: Ints
+    work: Floats
 
     @classmethod
     def start(cls, residuals: Floats, p: int) -> Walkers:
         """At the least-squares fit, with no row tied."""
         count = len(residuals)
         directions = np.repeat(np.eye(p)[:, :, None], count, axis=2)
-        signs = np.where(residuals < 0.0, -1.0, 1.0)
-        return cls(residuals.copy(), signs, directions, np.full((p, count), -1, dtype=np.int64))
+        basis = np.full((p, count), -1, dtype=np.int64)
+        return cls(residuals.copy(), directions, basis, np.empty((3, *residuals.shape)))
 
     def some(self, kept: Ints) -> Walkers:
         """Some of them."""
-        return Walkers(self.residuals[kept], self.signs[kept], self.directions[..., kept], self.basis[:, kept])
+        return Walkers(self.residuals[kept], self.directions[..., kept], self.basis[:, kept], self.work)
+
+    @property
+    def count(self) -> int:
+        """A."""
+        return len(self.residuals)
 
     def gains(self, Q: Floats) -> tuple[Floats, Floats]:
         """How fast the sum of absolute residuals falls along each edge, (p, A), and the dual values, (p, A)."""
-        duals = np.einsum("ia,ija->ja", (self.signs @ Q).T, self.directions)
+        signs = np.copysign(1.0, self.residuals, out=self.work[0, : self.count])
+        j, a = np.nonzero(self.basis >= 0)
+        signs[a, self.basis[j, a]] = 0.0
+        duals = np.einsum("ia,ija->ja", Q.T @ signs.T, self.directions)
         return np.abs(duals) - (self.basis >= 0), duals
 
     def walk(self, Q: Floats, gains: Floats, duals: Floats) -> None:
@@ -68,41 +80,39 @@ class Walkers:
         gains, duals : ndarray of shape (p, A)
             As `gains` gives them.
         """
-        at = np.arange(gains.shape[1])
+        at = np.arange(self.count)
         steep = gains / np.sqrt(np.einsum("ija,ija->ja", self.directions, self.directions))
         steep[self.basis < 0] += 2.0 * (1.0 + np.abs(steep).max())
         j = np.argmax(steep, axis=0)
         way = np.where(duals[j, at] < 0.0, -1.0, 1.0)
         speed = (self.directions[:, j, at] * way).T @ Q.T
         step, row = self._search(speed, gains[j, at])
-        left = self.basis[j, at]
-        tied = left >= 0
         speed *= step[:, None]
         self.residuals -= speed
-        self.signs[at[tied], left[tied]] = -way[tied]
-        self.signs[at, row] = 0.0
+        # A row just left keeps the side it was left on, even if the walk was no longer than its rounding.
+        left = self.basis[j, at]
+        tied = np.flatnonzero(left >= 0)
+        self.residuals[tied, left[tied]] = -way[tied] * step[tied]
         self._pivot(at, j, row, Q)
 
     def _search(self, speed: Floats, gain: Floats) -> tuple[Floats, Ints]:
-        """Length of the walk and the row that ends it, (A,); rows passed change sides.
+        """Length of the walk and the row that ends it, (A,).
 
         The sum of absolute residuals is piecewise linear along an edge: its slope starts at -gain and rises by twice the speed
-        of each row that is passed. The walk ends where the slope is no longer negative.
+        of each row whose residual changes sign. The walk ends where the slope is no longer negative.
         """
-        closing = self.signs * speed
-        fastest = np.abs(speed).max(axis=1)
-        closing[closing <= _STILL * fastest[:, None]] = 0.0
-        times = np.full(closing.shape, np.inf)
-        np.divide(np.abs(self.residuals), closing, out=times, where=closing > 0.0)
-        order = np.argsort(times, axis=1)
-        passed = np.take_along_axis(closing, order, axis=1)
-        np.cumsum(passed, axis=1, out=passed)
-        enough = np.minimum(0.5 * gain, passed[:, -1] * (1.0 - 1e-12))
-        at = np.arange(len(gain))
-        row = order[at, np.argmax(passed >= enough[:, None], axis=1)]
-        step = times[at, row]
-        np.negative(self.signs, out=self.signs, where=times < step[:, None])
-        return step, row
+        signs, closing, times = (array[: self.count] for array in self.work)
+        np.multiply(signs, speed, out=closing)
+        least = _STILL * np.abs(closing).max(axis=1)[:, None]
+        # Rows that stand still or draw away have no weight, so it does not matter when their turn comes.
+        np.maximum(closing, least, out=closing)
+        np.abs(self.residuals, out=times)
+        np.divide(times, closing, out=times)
+        closing -= least
+        total = closing.sum(axis=1)
+        # Off 0 and off the total by more than rounding: an edge on which nothing is gained still has to end at a row that moves.
+        row = first_to_reach(times, closing, np.clip(0.5 * gain, total * 1e-12, total * (1.0 - 1e-12)))
+        return times[np.arange(self.count), row], row
 
     def _pivot(self, at: Ints, j: Ints, row: Ints, Q: Floats) -> None:
         """Tie direction j to the row that ended the walk."""
@@ -114,7 +124,7 @@ class Walkers:
         self.basis[j, at] = row
 
 
-def least_absolute(Q: Floats, e: Floats) -> tuple[Floats, Flags]:
+def least_absolute(Q: Floats, e: Floats) -> tuple[Floats, Ints, Flags]:
     """Minimise sum |e - Q d| for every replicate.
 
     Parameters
@@ -128,6 +138,8 @@ def least_absolute(Q: Floats, e: Floats) -> tuple[Floats, Flags]:
     -------
     d : ndarray of shape (p, B)
         Least absolute minus least squares; a vertex, one of them where there are several.
+    basis : ndarray of shape (p, B)
+        The rows it fits.
     failed : ndarray of bool, shape (B,)
         Where no optimum was reached.
 
@@ -136,21 +148,25 @@ def least_absolute(Q: Floats, e: Floats) -> tuple[Floats, Flags]:
     Exact: d fits p rows, and their dual values lie between -1 and 1 (Barrodale & Roberts 1973 walk the same edges). Replicates
     that have arrived leave.
     """
-    B, p = e.shape[0], Q.shape[1]
-    d, failed = np.zeros((p, B)), np.zeros(B, dtype=bool)
-    going, walkers = np.arange(B), Walkers.start(e, p)
+    (B, n), p = e.shape, Q.shape[1]
+    d, basis, failed = np.zeros((p, B)), np.zeros((p, B), dtype=np.int64), np.zeros(B, dtype=bool)
+    size = _NUDGE * np.sqrt(np.einsum("bt,bt->b", e, e) / n)
+    going, walkers = np.arange(B), Walkers.start(e + size[:, None] * (np.arange(1, n + 1) * _GOLDEN % 1.0 - 0.5), p)
     for _ in range(_ROUNDS * (p + 1)):
         gains, duals = walkers.gains(Q)
-        done = (gains.max(axis=0) <= _SLACK) & (walkers.basis >= 0).all(axis=0)
-        if done.any():
-            d[:, going[done]] = fitted_exactly(Q, e[going[done]], walkers.some(np.flatnonzero(done)))
-            left = np.flatnonzero(~done)
+        arrived = (gains.max(axis=0) <= _SLACK) & (walkers.basis >= 0).all(axis=0)
+        if arrived.any():
+            some = walkers.some(np.flatnonzero(arrived))
+            d[:, going[arrived]] = fitted_exactly(Q, e[going[arrived]], some)
+            basis[:, going[arrived]] = some.basis
+            left = np.flatnonzero(~arrived)
             going, walkers, gains, duals = going[left], walkers.some(left), gains[:, left], duals[:, left]
+            walkers.work[0, : left.size] = walkers.work[0, left]
         if going.size == 0:
             break
         walkers.walk(Q, gains, duals)
     failed[going] = True
-    return d, failed
+    return d, basis, failed
 
 
 def fitted_exactly(Q: Floats, e: Floats, walkers: Walkers) -> Floats:
@@ -160,3 +176,48 @@ def fitted_exactly(Q: Floats, e: Floats, walkers: Walkers) -> Floats:
     d = np.einsum("ija,ja->ia", walkers.directions, wanted)
     d += np.einsum("ija,ja->ia", walkers.directions, wanted - np.einsum("jai,ia->ja", rows, d))
     return np.asarray(d)
+
+
+def first_to_reach(times: Floats, weights: Floats, enough: Floats) -> Ints:
+    """In order of time, the element at which the summed weight reaches enough: a weighted quantile of each line.
+
+    Parameters
+    ----------
+    times : ndarray of shape (A, n)
+        Not negative, finite.
+    weights : ndarray of shape (A, n)
+        Not negative.
+    enough : ndarray of shape (A,)
+        Below the sum of the weights.
+
+    Returns
+    -------
+    ndarray of shape (A,)
+        Index of the element.
+
+    Notes
+    -----
+    Times and indices are sorted as one: the last bits of the time, below its rounding error, give way to the index, and
+    doubles that are not negative sort as their bits do. Walks end early as a rule, so that few elements need a full sort.
+    """
+    A, n = times.shape
+    mask = (1 << max(n - 1, 1).bit_length()) - 1
+    keys = times.view(np.int64) & ~mask
+    keys |= np.arange(n)
+    found = np.zeros(A, dtype=np.int64)
+    waiting = np.arange(A)
+    for some in (max(8, n // 4), n):
+        lines = keys if waiting.size == A else keys[waiting]
+        if some < n:
+            lines.view(np.float64).partition(some - 1, axis=1)
+        head = lines[:, :some].copy()
+        head.view(np.float64).sort(axis=1)
+        head &= mask
+        reached = np.cumsum(weights[waiting[:, None], head], axis=1) >= enough[waiting, None]
+        place = np.argmax(reached, axis=1)
+        at = np.arange(waiting.size)
+        found[waiting] = head[at, place]
+        waiting = waiting[~reached[at, place]]
+        if waiting.size == 0:
+            break
+    return found

@@ -8,6 +8,7 @@ from functools import partial
 
 import numpy as np
 
+from withstand.errors import ScenarioError
 from withstand.procedures.base import Fitter, Procedure, register
 from withstand.procedures.fit import Fit, Flags, IntervalFit
 from withstand.procedures.multipliers import (
@@ -25,6 +26,9 @@ from withstand.procedures.sample import Sample
 from withstand.study.design import Design, Floats
 from withstand.study.focus import Focus, FocusKind
 
+_POWERS = {"hc3": 1.0, "hc2": 0.5, "hc0": 0.0}
+"""Power of 1 - h that residuals are divided by."""
+
 NO_LAW = "not applicable, because this resampling says nothing about the error of a new response"
 
 
@@ -39,15 +43,18 @@ class WildBootstrap(Procedure):
         Two points (signs) or Webb's six.
     draws : int
         Bootstrap samples.
+    residuals : {"hc3", "hc2", "hc0"}
+        What the residuals are divided by, in the samples and in the standard errors: 1 - h, its root, or nothing.
 
     Notes
     -----
-    The interval is studentised and symmetric, from residuals e / (1 - h). The test imposes the null hypothesis: residuals and
-    leverages are those of the restricted fit (MacKinnon 2013).
+    The interval is studentised and symmetric. The test imposes the null hypothesis: residuals and leverages are those of the
+    restricted fit (MacKinnon 2013).
     """
 
     weights: str = "rademacher"
     draws: int = DRAWS
+    residuals: str = "hc3"
 
     name = "wild-bootstrap"
     family = "bootstrap"
@@ -58,6 +65,12 @@ class WildBootstrap(Procedure):
     def __post_init__(self) -> None:
         check_multipliers(self.weights, self.name)
         check_draws(self.draws, self.name)
+        if self.residuals not in _POWERS:
+            raise ScenarioError(
+                f"residuals is '{self.residuals}'",
+                where=f"procedures.use: {self.name}.residuals",
+                remedy=f"Give one of {', '.join(_POWERS)}.",
+            )
 
     def not_applicable(self, design: Design, focus: Focus) -> str | None:
         """See Procedure."""
@@ -70,7 +83,7 @@ class WildBootstrap(Procedure):
     def prepare(self, design: Design, foci: Sequence[Focus], level: float) -> Fitter:
         """See Procedure."""
         allowed = allowed_exceedances(self.draws, 1.0 - level, self.name)
-        machines = [_Machine.of(design, focus) for focus in foci]
+        machines = [_Machine.of(design, focus, _POWERS[self.residuals]) for focus in foci]
 
         def fit(sample: Sample) -> list[Fit]:
             return [self._fit(machine, sample, allowed) for machine in machines]
@@ -87,9 +100,8 @@ class WildBootstrap(Procedure):
         if len(estimate) > 1:
             return IntervalFit(estimate, None, test=test)
         critical = np.empty(sample.width)
-        stretched = 1.0 / (1.0 - machine.design.leverage)
         for part, V in slabs(sample, self.name, partial(self._draw, machine.design.n)):
-            statistics = machine.drawn(V, stretched[:, None] * sample.residuals[:, part])
+            statistics = machine.drawn(V, machine.stretch[:, None] * sample.residuals[:, part])
             critical[part] = kth_largest(statistics, allowed)
         claimed = covariance[0, 0]
         half = np.sqrt(critical * claimed)
@@ -112,9 +124,9 @@ class WildBootstrap(Procedure):
 
 @dataclass(frozen=True, eq=False)
 class _Machine:
-    """Wald statistics with HC3 covariances of responses v u, for many v and u at once.
+    """Wald statistics with sandwich covariances of responses v u, for many v and u at once.
 
-    With D the diagonal of an HC3 weight, M = I - QQ' and c = Q'(v u), (M v u)' D (M v u) = sum v^2 d u^2 + c'(G c - 2 g),
+    With D a diagonal of sandwich weights, M = I - QQ' and c = Q'(v u), (M v u)' D (M v u) = sum v^2 d u^2 + c'(G c - 2 g),
     G = Q'DQ and g = Q'D(v u): everything is a product of the matrix of v with matrices made from u.
 
     Parameters
@@ -122,15 +134,15 @@ class _Machine:
     basis : ndarray of shape (k, p)
         Focal quantities in the coordinates of Q.
     weights : ndarray of shape (m, n)
-        HC3 weights a_i a_j / (1 - h)^2 of the m = k (k + 1) / 2 pairs of focal rows.
+        Sandwich weights a_i a_j / (1 - h)^2 (or a lower power) of the m = k (k + 1) / 2 pairs of focal rows.
     loads : ndarray of shape ((m + 1) p, n)
         Columns of Q, then those of -2 DQ for each pair.
     inner : ndarray of shape (m, p, p)
         G.
     back : ndarray of shape (n, k)
         A'(AA')^-1: what the restricted fit moves the residuals by.
-    restricted_stretch : ndarray of shape (n,)
-        1 / (1 - leverage of the restricted fit).
+    stretch, restricted_stretch : ndarray of shape (n,)
+        1 / (1 - h), or a lower power, with the leverages of the full and of the restricted fit.
     """
 
     design: Design
@@ -139,14 +151,16 @@ class _Machine:
     loads: Floats
     inner: Floats
     back: Floats
+    stretch: Floats
     restricted_stretch: Floats
 
     @classmethod
-    def of(cls, design: Design, focus: Focus) -> _Machine:
+    def of(cls, design: Design, focus: Focus, power: float) -> _Machine:
         """Prepare a focal quantity on a design."""
         A, Q = design.estimator(focus.L), design.Q
         left, right = np.triu_indices(len(A))
-        weights = A[left] * A[right] / (1.0 - design.leverage) ** 2
+        stretch = (1.0 - design.leverage) ** -power
+        weights = A[left] * A[right] * stretch**2
         loaded = weights[:, :, None] * Q
         back = np.linalg.solve(A @ A.T, A).T
         restricted = design.leverage - np.einsum("nk,kn->n", back, A)
@@ -157,11 +171,12 @@ class _Machine:
             np.ascontiguousarray(np.concatenate([Q, *(-2.0 * loaded)], axis=1).T),
             np.asarray(Q.T @ loaded),
             np.asarray(back),
-            1.0 / (1.0 - restricted),
+            stretch,
+            (1.0 - restricted) ** -power,
         )
 
     def covariance(self, sample: Sample) -> Floats:
-        """HC3 covariances of the estimates, (k, k, B)."""
+        """Sandwich covariances of the estimates, (k, k, B)."""
         return full_square(self.weights @ sample.squared_residuals)
 
     def drawn(self, V: Floats, U: Floats) -> Floats:

@@ -15,7 +15,8 @@ from withstand.study.rows import Account
 from withstand.study.table import NOTICES, check_names
 
 FEW_CODES = 8
-"""A whole-number predictor with at most so many values may hold codes rather than amounts."""
+LARGEST_CODE = 20
+"""A whole-number predictor with at most so many values, none of them larger, may hold codes rather than amounts."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -239,7 +240,8 @@ def _code_notices(complete: pd.DataFrame, formula: Formula) -> list[str]:
         if isinstance(column.dtype, pd.CategoricalDtype):
             continue
         values = np.unique(column.to_numpy())
-        if 2 < values.size <= FEW_CODES and 2 * values.size <= len(column) and (values == np.round(values)).all():
+        whole = (values == np.round(values)).all() and values.min() >= 0.0 and values.max() <= LARGEST_CODE
+        if 2 < values.size <= FEW_CODES and 2 * values.size <= len(column) and whole:
             told = ", ".join(f"{value:g}" for value in values)
             notices.append(f"'{name}' holds only the whole numbers {told} and enters the model as a number; "
                            f"write C({name}) if they are codes")  # fmt: skip
