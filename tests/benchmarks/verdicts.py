@@ -22,15 +22,12 @@ from withstand.departures.mean import Curvature
 from withstand.departures.power_spread import PowerSpread
 from withstand.departures.spread import Bowtie, Fan
 from withstand.departures.world import World
-from withstand.engine.block import BASELINE
-from withstand.engine.executors import InProcess
-from withstand.engine.job import Job
-from withstand.engine.ledger import Ledger
-from withstand.engine.runner import Runner
 from withstand.judgement.aspects import aspects_of
-from withstand.judgement.sequential import Looks, Standing, next_step
 from withstand.judgement.tolerance import Tolerance
-from withstand.judgement.verdict import Verdict, judge
+from withstand.judgement.verdict import Verdict
+from withstand.lab.gather import Effort, gather, open_bench
+from withstand.lab.grid import Grid
+from withstand.lab.plan import Axis, Plan
 from withstand.procedures.base import LinearProcedure
 from withstand.procedures.classical import Ols
 from withstand.procedures.sandwich import Hc0, Hc1, Hc2, Hc2Bm, Hc3
@@ -40,12 +37,12 @@ from withstand.study.rows import FixedRows
 from withstand.study.study import Study
 
 ALPHA, DELTA = 0.05, 0.01
-LOOKS = Looks(10_000, 160_000)
+FIRST, MOST = 10_000, 160_000
 PROCEDURES = (Ols(), Hc0(), Hc1(), Hc2(), Hc2Bm(), Hc3())
 TOLERANCE = Tolerance()
 
 
-def worlds() -> tuple[World, ...]:
+def axes() -> tuple[Axis, ...]:
     """Every departure with normal errors on its default ladder."""
     departures = (
         Fan(along="x"),
@@ -57,7 +54,7 @@ def worlds() -> tuple[World, ...]:
         Clusters(),
         Curvature(along="x"),
     )
-    return tuple(World(((departure, severity),)) for departure in departures for severity in departure.ladder)
+    return tuple(Axis(departure) for departure in departures)
 
 
 def study(n: int, tail: float, focal: str) -> Study:
@@ -135,7 +132,7 @@ def main() -> int:
         looked += distinct
     wrong = [c for c in cells if c["verdict"] != "unsettled" and c["verdict"] != c["truth"]]
     unsettled = [c for c in cells if c["verdict"] == "unsettled"]
-    saved = looked * LOOKS.most / spent
+    saved = looked * MOST / spent
     print(f"{len(cells)} cells in {time.perf_counter() - started:.0f} s")
     for truth in ("holds", "gives"):
         mine = [c for c in cells if c["truth"] == truth]
@@ -148,7 +145,7 @@ def main() -> int:
     )
     for cell in wrong:
         print("wrong:", cell)
-    print(f"{spent:,} replicates spent; fixed at the cap: {looked * LOOKS.most:,}")
+    print(f"{spent:,} replicates spent; fixed at the cap: {looked * MOST:,}")
     rate = len(wrong) / len(cells)
     bars = [
         ("verdict-cells", len(cells), ">= 500", len(cells) >= 500 or options.quick),
@@ -164,40 +161,34 @@ def main() -> int:
 
 
 def run(asked: Study) -> tuple[list[dict[str, object]], int, int]:
-    """Judge every cell of a study; also replicates spent and cells simulated."""
-    job = Job(asked, worlds(), PROCEDURES, seed=11)
-    runner = Runner(job, Ledger(None), InProcess())
-    aspects = aspects_of(TOLERANCE, ALPHA)
-    keys = [(world, p) for world in (BASELINE, *range(len(job.worlds))) for p in range(len(PROCEDURES))]
-    standings = {key: Standing(0, False) for key in keys}
-    verdicts: dict[tuple[int, int], list[Verdict]] = {}
-    while (step := next_step(standings, LOOKS)) is not None:
-        runner.advance(step.cells, step.replicates // 2000)
-        for key in step.cells:
-            tallies = [tally for tally in runner.read(key).tallies if tally is not None]
-            look = LOOKS.reached(tallies[0].replicates)
-            judgements = [judge(tally, aspects, DELTA, look) for tally in tallies]
-            verdicts[key] = [judgement.verdict for judgement in judgements]
-            standings[key] = Standing(tallies[0].replicates, all(judgement.settled for judgement in judgements))
+    """Judge every cell of a study by simulation alone; also replicates spent and worlds with procedures simulated."""
+    plan = Plan(axes(), PROCEDURES, TOLERANCE, seed=11, repetitions=FIRST, most=MOST, wrong_verdict=DELTA, method="simulated")
+    grid = Grid(asked, plan)
+    with open_bench(grid, Effort()) as bench:
+        evidence = gather(grid, bench)
+    bounds = aspects_of(TOLERANCE, ALPHA)
     cells: list[dict[str, object]] = []
-    for world, p in keys:
-        for focus, verdict in zip(asked.focus, verdicts[world, p], strict=True):
-            realised = World() if world == BASELINE else job.worlds[world]
-            coverage, bias = true_coverage(PROCEDURES[p], asked.design, focus, realised)
-            holds = coverage >= aspects["coverage"].low and abs(bias) <= 0.4
-            cells.append(
-                {
-                    "study": asked.name,
-                    "world": realised.key,
-                    "procedure": PROCEDURES[p].name,
-                    "focus": focus.name,
-                    "coverage": coverage,
-                    "bias_in_sd": bias,
-                    "truth": "holds" if holds else "gives",
-                    "verdict": verdict.value,
-                }
-            )
-    return cells, sum(standing.replicates for standing in standings.values()), len(keys)
+    for cell in evidence.cells:
+        judgement = evidence.verdict(cell)
+        if judgement is None or judgement.exact:
+            raise TypeError("every cell of this benchmark is simulated")
+        world = grid.world(cell.spot)
+        coverage, bias = true_coverage(PROCEDURES[cell.procedure_index], asked.design, cell.focus, world)
+        holds = coverage >= bounds["coverage"].low and abs(bias) <= bounds["bias_in_sd"].high
+        cells.append(
+            {
+                "study": asked.name,
+                "world": world.key,
+                "procedure": cell.procedure.identity,
+                "focus": cell.focus.name,
+                "coverage": coverage,
+                "bias_in_sd": bias,
+                "truth": "holds" if holds else "gives",
+                "verdict": judgement.verdict.value,
+            }
+        )
+    spent = {(cell.spot.world, cell.procedure_index): tally.replicates for cell, tally in evidence.tallies.items()}
+    return cells, sum(spent.values()), len(spent)
 
 
 if __name__ == "__main__":

@@ -19,8 +19,9 @@ from withstand.procedures import (
 from withstand.procedures.base import Answer
 from withstand.procedures.multipliers import exceeded, kth_largest, rademacher, wald, webb
 from withstand.study.design import Design
+from withstand.study.focus import Focus
 
-from .odd_data import CASES, make, new_at, sample_of, slope, two_slopes
+from .odd_data import CASES, make, mean_at, new_at, sample_of, slope, two_slopes
 
 LEVEL, ALPHA, DRAWS = 0.9, 0.1, 39
 POWER = {"hc3": 1.0, "hc2": 0.5, "hc0": 0.0}
@@ -66,7 +67,7 @@ def restricted(X, y, L, value):
     return e, hat(X @ free)
 
 
-def tested(drawn, observed, alpha=ALPHA):
+def significant(drawn, observed, alpha=ALPHA):
     return (1 + np.sum(np.asarray(drawn) >= observed * (1 - 1e-9))) / (1 + len(drawn)) <= alpha + 1e-9
 
 
@@ -79,7 +80,9 @@ def same_tests(fit, focus, reference):
         np.testing.assert_array_equal(fit.rejects(asked), [reference(b, asked) for b in range(len(fit.estimate[0]))])
 
 
-@pytest.mark.parametrize(("weights", "residuals"), [("rademacher", "hc3"), ("webb", "hc3"), ("rademacher", "hc2"), ("webb", "hc0")])
+@pytest.mark.parametrize(
+    ("weights", "residuals"), [("rademacher", "hc3"), ("webb", "hc3"), ("rademacher", "hc2"), ("webb", "hc0")]
+)
 @pytest.mark.parametrize(("kind", "seed"), CASES)
 def test_wild_bootstrap(kind, seed, weights, residuals):
     design, errors = make(kind, seed)
@@ -106,7 +109,7 @@ def test_wild_bootstrap(kind, seed, weights, residuals):
             b, e = ols(X, y)
             under, h = restricted(X, y, L, value)
             observed = statistic(L @ b - value, sandwich(X, e, L, power))
-            return tested(drawn(L, under / (1 - h) ** power), observed)
+            return significant(drawn(L, under / (1 - h) ** power), observed)
 
         same_tests(fit, focus, reference)
     for replicate in range(errors.shape[1]):
@@ -136,7 +139,7 @@ def test_wild_cluster_bootstrap(kind, seed):
         for v in V:
             b_drawn, e_drawn = ols(X, v * under)
             drawn.append(statistic(L @ b_drawn, cr1(X, e_drawn, L, groups)))
-        return tested(drawn, statistic(L @ b - value, cr1(X, e, L, groups)))
+        return significant(drawn, statistic(L @ b - value, cr1(X, e, L, groups)))
 
     for focus, fit in zip(foci, fits, strict=True):
         same_tests(fit, focus, lambda replicate, value, L=focus.L: reference(replicate, value, L))
@@ -179,7 +182,7 @@ def test_pairs_bootstrap(kind, seed):
                 drawn = [statistic(d, v) for d, v in found]
                 for value in VALUES:
                     observed = statistic(L @ b - value, claimed)
-                    assert fit.rejects(np.full(2, value))[replicate] == tested(drawn, observed)
+                    assert fit.rejects(np.full(2, value))[replicate] == significant(drawn, observed)
 
 
 @pytest.mark.parametrize(("kind", "seed"), CASES)
@@ -213,7 +216,7 @@ def test_residual_bootstrap(kind, seed):
                 drawn = [statistic(d, v * shape) for d, v in found]
                 for value in VALUES:
                     observed = statistic(L @ b - value, s2 * shape)
-                    assert fit.rejects(np.full(2, value))[replicate] == tested(drawn, observed)
+                    assert fit.rejects(np.full(2, value))[replicate] == significant(drawn, observed)
 
 
 @pytest.mark.parametrize(("kind", "seed"), CASES)
@@ -235,7 +238,7 @@ def test_permutation(kind, seed):
         def reference(replicate, value, L=L, f_ratio=f_ratio):
             y = errors[:, replicate]
             under, _ = restricted(X, y, L, value)
-            return tested([f_ratio(y - under + under[code], value) for code in codes], f_ratio(y, value))
+            return significant([f_ratio(y - under + under[code], value) for code in codes], f_ratio(y, value))
 
         same_tests(fit, focus, reference)
         assert fit.misses(np.zeros(1)) is None
@@ -331,6 +334,8 @@ def test_not_applicable_says_why():
     assert "new response" in WildBootstrap().not_applicable(design, new_at(design))
     assert "new response" in Permutation().not_applicable(design, new_at(design))
     assert "no groups" in WildClusterBootstrap().not_applicable(bare, slope(design))
+    for focus in (mean_at(design), Focus.coefficient("Intercept", design.names)):
+        assert "contains the level" in Permutation().not_applicable(design, focus)
     spike = Design(np.column_stack([np.ones(9), np.arange(9) == 4]).astype(float), ("Intercept", "x1"))
     assert "row 5 (in analysis order) has leverage 1" in WildBootstrap().not_applicable(spike, slope(spike))
 
@@ -338,7 +343,9 @@ def test_not_applicable_says_why():
 def test_rows_that_can_hardly_be_drawn_count_as_failures():
     """With two rows more than 30 columns, next to no draw holds 31 different rows."""
     rng = np.random.default_rng(5)
-    design = Design(np.column_stack([np.ones(32), rng.standard_normal((32, 29))]), ("Intercept", *(f"x{i}" for i in range(1, 30))))
+    design = Design(
+        np.column_stack([np.ones(32), rng.standard_normal((32, 29))]), ("Intercept", *(f"x{i}" for i in range(1, 30)))
+    )
     fit = PairsBootstrap(19).prepare(design, [slope(design)], LEVEL)(sample_of(design, rng.standard_normal((32, 4))))[0]
     assert fit.failed.all()
 

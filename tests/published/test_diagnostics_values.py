@@ -97,3 +97,19 @@ def test_size_under_laplace_errors():
         p = diagnostic.p_values(design, diagnostic.statistic(sample))
         tolerance = 4.5 * np.sqrt(size * (1.0 - size) * (1.0 / replicates + 1.0 / published))
         assert np.mean(p < 0.05) == pytest.approx(size, abs=tolerance)
+
+
+def test_large_sample_limit_of_breusch_pagan_under_laplace_errors():
+    """Closed form: P(chi2_1 > c / ((kappa - 1) / 2)) = .2151, c the 5 % point of chi2_1 and kappa = 6 for Laplace errors."""
+    limit = stats.chi2.sf(stats.chi2.isf(0.05, 1) / ((6.0 - 1.0) / 2.0), 1)
+    assert limit == pytest.approx(0.2151, abs=5e-5)
+    n, replicates = 2_000, 4_000
+    x = np.linspace(0.0, 10.0, n)
+    design = Design(X=np.column_stack([np.ones(n), x]), names=("Intercept", "x"))
+    generator, rejected = np.random.default_rng(8), 0
+    for _ in range(10):
+        sample = Sample(design, generator.laplace(size=(n, replicates // 10)), None)
+        rejected += np.count_nonzero(BreuschPagan().p_values(design, BreuschPagan().statistic(sample)) < 0.05)
+    # At n = 100 the size is .032 below the limit; at 2,000 rows a twentieth of that is left, beside the Monte Carlo error.
+    tolerance = 0.032 / 20 + 4.5 * np.sqrt(limit * (1.0 - limit) / replicates)
+    assert rejected / replicates == pytest.approx(limit, abs=tolerance)

@@ -152,8 +152,9 @@ def build(
             ],
             "rows_mode": "fixed",
             "axes": [
-                {"departure": kind, "along": along, "stack": stack, "name": _shown(kind, along, stack)}
-                for kind, along, stack, *_ in departures
+                {"departure": kind, "along": along, "stack": stack, "name": _shown(kind, along, stack),
+                 "ladder": [[severity, label.format(_figure(kind, severity))] for severity in ladder]}
+                for kind, along, stack, ladder, label, *_ in departures
             ],
             "focus": [
                 {

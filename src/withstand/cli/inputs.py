@@ -49,7 +49,7 @@ def loaded_from(input_path: Path, options: Mapping[str, Any]) -> Loaded:
     InputError
         If the input cannot be used.
     """
-    simulation = {key: options[key] for key in ("seed", "repetitions", "method") if options.get(key) is not None}
+    simulation = {key: options[key] for key in ("seed", "repetitions", "most", "method") if options.get(key) is not None}
     study = {"decimal": options["decimal"]} if options.get("decimal") else {}
     if input_path.suffix.lower() == ".toml":
         given = [key for key in _STUDY if options.get(key)]

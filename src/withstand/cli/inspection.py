@@ -6,6 +6,7 @@ import textwrap
 from collections.abc import Mapping, Sequence
 from typing import Any
 
+from withstand.cli.layout import columns
 from withstand.lab.outcome import Outcome
 from withstand.report.account import estimate_sentence
 from withstand.report.html import fact_tables, study_facts
@@ -25,7 +26,7 @@ def inspection(outcome: Outcome) -> list[str]:
     view = View(outcome)
     lines = ["Design and fit", *_pairs(study_facts(view))]
     for table in fact_tables(view):
-        lines += ["", table.caption, *_columns([table.columns, *([cell.text for cell in row] for row in table.rows)])]
+        lines += ["", table.caption, *columns([table.columns, *([cell.text for cell in row] for row in table.rows)])]
     lines += ["", "What collinearity costs", *_collinearity(outcome.facts)]
     told = [(focus, estimate_sentence(view, focus)) for focus in view.foci]
     lines += ["", "Focus", *_pairs([(focus, sentence) for focus, sentence in told if sentence])]
@@ -48,11 +49,3 @@ def _pairs(pairs: Sequence[tuple[str, str]]) -> list[str]:
         indent = " " * (width + 4)
         lines += textwrap.wrap(f"  {name.ljust(width)}  {value}", max(WIDTH, width + 40), subsequent_indent=indent)
     return lines
-
-
-def _columns(rows: Sequence[Sequence[str]]) -> list[str]:
-    widths = [max(len(row[place]) for row in rows) for place in range(len(rows[0]))]
-    return [
-        "  " + "  ".join(cell.ljust(width) if place == 0 else cell.rjust(width) for place, (cell, width) in enumerate(zip(row, widths, strict=True)))
-        for row in rows
-    ]

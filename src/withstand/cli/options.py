@@ -26,6 +26,7 @@ _INPUT = [
 _EFFORT = [
     click.option("--seed", type=click.IntRange(0), help="Seed; same seed, same numbers."),
     click.option("--repetitions", type=click.IntRange(100), help="Replicates a simulated cell gets at least."),
+    click.option("--most", type=click.IntRange(100), help="Replicates a simulated cell gets at most, in search of a verdict."),
     click.option("--method", type=click.Choice(["auto", "simulated"]), help="Exact answers where there are any, or none."),
 ]
 

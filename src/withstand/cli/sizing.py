@@ -3,30 +3,39 @@
 from __future__ import annotations
 
 import math
+import re
+import textwrap
 from collections.abc import Sequence
 from contextlib import closing
-from dataclasses import fields
+from dataclasses import fields, replace
 from pathlib import Path
 from typing import Any
 
 import click
+import pandas as pd
 
 from withstand.cli.bars import Bars
 from withstand.cli.inputs import loaded_from
+from withstand.cli.layout import columns
 from withstand.cli.running import cores, default_folder
 from withstand.cli.speech import records, say_json
 from withstand.cli.state import State
 from withstand.departures import Departure, departure_class
-from withstand.errors import InputError, ScenarioError
+from withstand.errors import InputError, ScenarioError, nearest
 from withstand.front.sizing import find_size, rows_buy, several_procedures, size_at_corners
 from withstand.lab.plan import Axis
 from withstand.lab.size_answer import SizeAnswer
 from withstand.lab.size_plan import Effort, Targets
+from withstand.lab.size_ranges import CornerAnswer
+from withstand.report.screen import WIDTH
 from withstand.report.size_report import write_size_report
-from withstand.report.words import number
+from withstand.report.words import number, percent
 from withstand.scenario.choices import fitting
 from withstand.scenario.load import Loaded
 from withstand.study.study import Study
+
+_WORLD = re.compile(r" under |(?= when nothing is wrong)")
+"""Between a requirement and the world it must be met in."""
 
 
 def size_input(
@@ -37,12 +46,15 @@ def size_input(
 ) -> None:  # fmt: skip
     """Answer the question and write size.md, size.csv and the figure."""
     loaded = loaded_from(input_path, options)
-    study, plan = loaded.study, loaded.plan
+    # What the defaults of `run` left out says nothing about this question.
+    study = replace(loaded.study, notices=tuple(one for one in loaded.study.notices if one not in loaded.left_out))
+    plan = loaded.plan
     axes = _axes(loaded, departures, severities, along, together)
     chosen = several_procedures(list(procedures), study) if procedures else _own_procedures(loaded)
     effort = Effort(plan.seed, plan.repetitions, plan.most, largest, workers=workers or cores(), method=plan.method)
-    folder = out or default_folder(loaded.name)
-    state.out = folder
+    state.out = folder = out or default_folder(loaded.name)
+    if on is not None and on not in (names := [focus.name for focus in study.focus]):
+        raise ScenarioError(f"'{on}' is not in the focus", where="--on", remedy=nearest(on, names))
     if at:
         _say_table(rows_buy(study, axes, chosen, effort, at, focus=on, growth=growth), quiet, as_json)
         return
@@ -51,14 +63,15 @@ def size_input(
         common: dict[str, Any] = {"tolerance": plan.tolerance, "focus": on, "growth": growth, "progress": bars}
         if ranges:
             corners = size_at_corners(study, axes, chosen, targets, effort, _ranges(ranges), **common)
-            _say_corners(corners.sentences, corners.as_record(), corners.answers[0], folder, quiet, as_json)
+            told = f"At the corners of the ranges: {' '.join(corners.sentences)}"
+            _say_corners(corners, write_size_report(corners.answers[0], folder, [told]), quiet, as_json)
             return
         answer = find_size(study, axes, chosen, targets, effort, **common)
     written = write_size_report(answer, folder)
     if as_json:
         say_json(answer.as_record() | {"files": [str(path) for path in written]})
     elif not quiet:
-        _say_answer(study, answer, written)
+        _say_answer(answer, written)
 
 
 def _axes(
@@ -114,33 +127,52 @@ def _ranges(given: Sequence[str]) -> dict[str, list[float]]:
     return ranges
 
 
-def _say_answer(study: Study, answer: SizeAnswer, written: Sequence[Path]) -> None:
-    click.echo(f"{study.name}\nFocus: {answer.focus}. Asked: {'; '.join(answer.asked)}.\n")
-    for sentence in answer.sentences:
-        click.echo(f"* {sentence}")
-    for notice in answer.notices:
-        click.echo(f"Note: {notice}.")
-    click.echo(f"Everything that was looked at: {written[0]}")
+def _say_answer(answer: SizeAnswer, written: Sequence[Path]) -> None:
+    lines = [*_asked(answer), *(line for sentence in answer.sentences for line in _folded(f"* {sentence}"))]
+    lines += [line for notice in answer.notices for line in _folded(f"Note: {notice}.")]
+    click.echo("\n".join([*lines, f"Everything that was looked at: {written[0]}"]))
 
 
-def _say_corners(
-    sentences: Sequence[str], corners: Any, first: SizeAnswer, folder: Path, quiet: bool, as_json: bool
-) -> None:
-    written = write_size_report(first, folder, [f"At the corners of the ranges: {' '.join(sentences)}"])
+def _say_corners(corners: CornerAnswer, written: Sequence[Path], quiet: bool, as_json: bool) -> None:
     if as_json:
-        say_json({"sentences": list(sentences), "corners": corners, "files": [str(path) for path in written]})
+        say_json({"sentences": corners.sentences, "corners": corners.as_record(), "files": [str(path) for path in written]})
     elif not quiet:
-        click.echo(f"{first.title}\nFocus: {first.focus}. Asked: {'; '.join(first.asked)}.\n")
-        for sentence in sentences:
-            click.echo(f"* {sentence}")
+        lines = [line for sentence in corners.sentences for line in _folded(f"* {sentence}")]
+        click.echo("\n".join([*_asked(corners.answers[0]), *lines, f"The first corner in full: {written[0]}"]))
 
 
-def _say_table(table: Any, quiet: bool, as_json: bool) -> None:
+def _asked(answer: SizeAnswer) -> list[str]:
+    """What must be met, and in which worlds, each said once."""
+    parts = [_WORLD.split(one, maxsplit=1) for one in answer.asked]
+    worlds = list(dict.fromkeys(where for _, where in parts if where))
+    lines = _folded(f"Focus: {answer.focus}. Asked: {'; '.join(dict.fromkeys(what for what, _ in parts))}.")
+    if worlds:
+        lines += _folded(f"{'In each of these worlds' if len(worlds) > 1 else 'World'}: {'; '.join(worlds)}.")
+    return [answer.title, *lines, ""]
+
+
+def _folded(text: str) -> list[str]:
+    return textwrap.wrap(text, WIDTH, subsequent_indent="  ", break_on_hyphens=False)
+
+
+def _say_table(table: pd.DataFrame, quiet: bool, as_json: bool) -> None:
     if as_json:
         say_json(records(table))
     elif not quiet:
-        shown = table.copy()
-        for name in shown.columns:
-            if shown[name].dtype.kind == "f":
-                shown[name] = [number(value) for value in shown[name]]
-        click.echo(shown.to_string(index=False))
+        shown = [["rows", "procedure", "covers", "power", "half width", "detectable effect", "world"]]
+        shown += [
+            [
+                str(row.n), row.procedure, _share(row.coverage), _share(row.power), _known(row.half_width),
+                _known(row.detectable_effect), row.world,
+            ]
+            for row in table.itertuples(index=False)
+        ]  # fmt: skip
+        click.echo("\n".join(columns(shown, left=(1, 6))))
+
+
+def _share(value: float) -> str:
+    return "" if math.isnan(value) else f"{percent(value)} %"
+
+
+def _known(value: float) -> str:
+    return "" if math.isnan(value) else number(value)

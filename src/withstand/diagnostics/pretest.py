@@ -160,7 +160,7 @@ def _fitter(branch: Procedure, design: Design, foci: Sequence[Focus], level: flo
 def detector(diagnostic: Diagnostic, design: Design, alpha: float) -> Callable[[Sample], Flags]:
     """The test of size alpha: whether the diagnostic fails, (B,) for a Sample."""
     statistic = diagnostic.prepare(design)
-    if diagnostic.p_values(design, np.array([1.0])) is not None:
+    if diagnostic.p_values(design, np.empty(0)) is not None:
         return lambda sample: np.asarray(_known(diagnostic.p_values(design, statistic(sample))) <= alpha)
     critical = Critical.of(_ideal_values(statistic, design), diagnostic.tail, alpha)
     return lambda sample: critical.rejects(statistic(sample))

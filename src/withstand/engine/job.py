@@ -17,6 +17,9 @@ _BLOCK_DOUBLES = 131_072
 _WIDTHS = (2000, 1000, 500, 200, 100, 50, 20, 10)
 """Block widths B; each divides the replicates of a task, so that round numbers of repetitions are reached exactly."""
 
+_DRAWN_WIDTH = 200
+"""Largest block where each has rows of its own: a task then holds 10 designs, whose spread is the Monte Carlo error."""
+
 TASK_REPLICATES = 2000
 """Replicates in a task, the unit of work, storage and loss."""
 
@@ -53,7 +56,8 @@ class Job:
     @property
     def width(self) -> int:
         """Replicates in a block."""
-        return block_width(self.study.n)
+        width = block_width(self.study.n)
+        return width if self.study.rows.fixed else min(width, _DRAWN_WIDTH)
 
     @property
     def blocks_per_task(self) -> int:

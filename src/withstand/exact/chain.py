@@ -40,7 +40,9 @@ class TridiagonalSolves:
         self._log_determinant = float(np.sum(np.log1p(-(chain.links**2))))
         self._d = s[:, 0] ** 2 * d[rows]
         self._left = columns[rows] / s
-        self._right = np.asfortranarray(np.hstack([s * columns[rows, :p], tridiagonal(self._diagonal, self._beside, self._left)]))
+        self._right = np.asfortranarray(
+            np.hstack([s * columns[rows, :p], tridiagonal(self._diagonal, self._beside, self._left)])
+        )
         self._p = p
 
     def pieces(self, theta: Values) -> Pieces:
@@ -50,15 +52,14 @@ class TridiagonalSolves:
         A, B, C = (np.full(shape, np.nan, dtype=theta.dtype) for shape in ((r, r, t), (r, p, t), (p, p, t)))
         factor, solve = (lapack.zgttrf, lapack.zgttrs) if np.iscomplexobj(theta) else (lapack.dgttrf, lapack.dgttrs)
         n = self._d.size
+        beside, right = self._beside.astype(theta.dtype), self._right.astype(theta.dtype, order="F")
         for i, value in enumerate(theta):
-            below, pivots, above, second, exchanges, _ = factor(
-                self._beside.astype(theta.dtype), self._diagonal + value * self._d, self._beside.astype(theta.dtype)
-            )
+            below, pivots, above, second, exchanges, _ = factor(beside, self._diagonal + value * self._d, beside)
             if np.any(exchanges != np.arange(1, n + 1)) or (not np.iscomplexobj(theta) and pivots.min() <= 0.0):
                 log_determinant[i] = np.nan
                 continue
             log_determinant[i] = self._log_determinant + np.sum(np.log(pivots))
-            solved, _ = solve(below, pivots, above, second, exchanges, self._right.astype(theta.dtype, order="F"), overwrite_b=1)
+            solved, _ = solve(below, pivots, above, second, exchanges, right)
             A[:, :, i] = _times(self._left * self._d[:, None], solved[:, p:]) * value
             B[:, :, i] = _times(self._right[:, :p], solved[:, p:]).T
             C[:, :, i] = _times(self._right[:, :p], solved[:, :p])

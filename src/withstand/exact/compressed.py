@@ -80,7 +80,9 @@ class CompressedRows:
             for first in range(int(begin), int(end), _ROWS):
                 rows = order[first : min(first + _ROWS, int(end))]
                 products = columns[rows][:, self._pairs[0]] * columns[rows][:, self._pairs[1]]
-                table = np.hstack([d[rows, None] * products, products, spread[rows, None] ** 2 * products, np.ones((rows.size, 1))])
+                table = np.hstack(
+                    [d[rows, None] * products, products, spread[rows, None] ** 2 * products, np.ones((rows.size, 1))]
+                )
                 if number < 0:
                     self._idle += table[:, :-1].sum(axis=0)
                 else:

@@ -30,7 +30,7 @@ from withstand.errors import NumericalError
 from withstand.exact.problem import Problem
 from withstand.exact.structure import structure_of
 from withstand.exact.tilt import Structure, Tilt, Values, join, tilt
-from withstand.study.design import Floats
+from withstand.study.design import Floats, Ints
 
 WANTED = 1e-8
 """Largest accepted absolute error of a probability."""
@@ -39,8 +39,14 @@ _WIDTH = 0.8
 """Scale of a path in units of the width of the saddle."""
 
 _BENDS = np.array([-0.25, -0.125, 0.0, 0.125, 0.25]) * np.pi
-_LOOKS = np.array([1.0, 2.0, 3.0, 4.0])
+_LOOKS = np.array([1.0, 2.0, 3.0, 4.0, 6.0, 9.0])
 """Bends among which a path is chosen, and the x at which they are compared."""
+
+_POOR = 1e-4
+"""Relative error at which a bent path is given up for the straight one."""
+
+_EXTENSIONS = 8
+"""How often the candidates are carried on towards 0, each time by eight octaves."""
 
 _STEP = 0.5
 _BLOCK = 14
@@ -62,7 +68,7 @@ class Probabilities:
     below, above : ndarray or None
         The two parts of `beyond`: w < 0 and w > 0; None for several focal coordinates.
     error : ndarray
-        Bound on the absolute error of each, from the convergence of the sums and rounding.
+        Estimate, on the safe side, of the absolute error of each, from the convergence of the sums and rounding.
     """
 
     beyond: Floats
@@ -113,6 +119,21 @@ class Inverter:
         exists = np.isfinite(self._log_mgf(found, grid, np.zeros((1, self.problem.k)))[0])
         return grid[exists], found.at(np.flatnonzero(exists))
 
+    def _saddles(self, d: Floats) -> Ints:
+        """For each effect (E, k) the candidate at which E[exp(s Q)]/|s| is least."""
+        for _ in range(_EXTENSIONS):
+            heights = self._log_mgf(self._grid_tilt, self._grid, d).real - np.log(np.abs(self._grid))
+            best = np.argmin(np.where(np.isnan(heights), np.inf, heights), axis=1)
+            least = np.abs(self._grid).min()
+            if np.all(np.abs(self._grid[best]) > least):
+                break
+            # Far effects, or a bias of many SDs, have their saddle close to 0.
+            finer = least * np.exp2(-np.arange(1.0, 9.0))
+            finer = np.concatenate([-finer, finer])
+            self._grid = np.concatenate([self._grid, finer])
+            self._grid_tilt = join([self._grid_tilt, self.tilt(finer)])
+        return best
+
     @staticmethod
     def _log_mgf(found: Tilt, s: Values, d: Floats) -> Values:
         with np.errstate(all="ignore"):
@@ -136,15 +157,14 @@ class Inverter:
         d = self.problem.shift + effects
         values = np.empty((3, len(d)))
         error = np.empty(len(d))
-        flat = self._log_mgf(self._grid_tilt, self._grid, d).real - np.log(np.abs(self._grid))
-        best = np.argmin(flat, axis=1)
+        best = self._saddles(d)
         for index in np.unique(best):
             chosen = best == index
-            values[:, chosen], error[chosen] = self._path(float(self._grid[index]), d[chosen]).integrate(d[chosen], sides)
+            values[:, chosen], error[chosen] = self._integrate(float(self._grid[index]), d[chosen], sides)
         if not np.all(error <= WANTED):
             raise NumericalError(
-                f"an exact probability was reached to {np.nanmax(error):.1e} only, with {WANTED:.0e} wanted "
-                f"({self.problem.n} rows, {self.problem.p} columns)"
+                f"an exact probability was reached to {np.nan_to_num(error, nan=np.inf).max():.1e} only, with {WANTED:.0e} "
+                f"wanted ({self.problem.n} rows, {self.problem.p} columns)"
             )
         negative = self._grid[best] < 0.0
         main = np.clip(np.where(negative, -values[0], values[0]), 0.0, 1.0)
@@ -156,26 +176,47 @@ class Inverter:
         above = np.clip(values[2] + np.where(negative, ndtr(mean), 0.0), 0.0, 1.0)
         return Probabilities(beyond, within, below, above, error)
 
-    def _path(self, c: float, d: Floats) -> _Path:
-        """The path through c, with a scale that fits the curvature of the integrand there, bent to where it falls fastest."""
+    def _integrate(self, c: float, d: Floats, sides: bool) -> tuple[Floats, Floats]:
+        """The integral through c for effects d (E, k), see _Path.integrate; effects that suit the same path share it."""
+        scales = self._scales(c, d)
+        bends = np.empty(len(d))
+        for scale in np.unique(scales):
+            bends[scales == scale] = self._bends(c, float(scale), d[scales == scale])
+        values, error = np.empty((3, len(d))), np.empty(len(d))
+
+        def follow(those: Ints) -> None:
+            for scale, bend in sorted(set(zip(scales[those].tolist(), bends[those].tolist(), strict=True))):
+                chosen = those[(scales[those] == scale) & (bends[those] == bend)]
+                if (c, scale, bend) not in self._paths:
+                    self._paths[c, scale, bend] = _Path(self, c, scale, bend)
+                values[:, chosen], error[chosen] = self._paths[c, scale, bend].integrate(d[chosen], sides)
+
+        follow(np.arange(len(d)))
+        # Along the straight line the integrand never rises above its value at c; a bend may have met a hill further out.
+        poor = ~(error <= np.minimum(WANTED, _POOR * np.abs(values[0]))) & (bends != 0.0)
+        bends[poor] = 0.0
+        follow(np.flatnonzero(poor))
+        return values, error
+
+    def _scales(self, c: float, d: Floats) -> Floats:
+        """Scales (E,) that fit the curvature of the integrand at c; powers of two times c, so that few are different."""
         aside = np.array([c, c + 0.1j * abs(c)])
-        fall = np.diff(self._log_mgf(self.tilt(aside), aside, d).real, axis=1)
-        curvature = np.max(-2.0 * fall / (0.1 * c) ** 2 + 1.0 / c**2)
-        # A power of two times c, so that effects of similar size share a path.
-        scale = abs(c) * float(np.exp2(np.floor(np.log2(_WIDTH / (abs(c) * np.sqrt(curvature))))))
+        fall = np.diff(self._log_mgf(self.tilt(aside), aside, d).real, axis=1)[:, 0]
+        curvature = -2.0 * fall / (0.1 * c) ** 2 + 1.0 / c**2
+        return np.asarray(abs(c) * np.exp2(np.floor(np.log2(_WIDTH / (abs(c) * np.sqrt(curvature))))))
+
+    def _bends(self, c: float, scale: float, d: Floats) -> Floats:
+        """Bends (E,) with which the integrand falls fastest along the path."""
         if (c, scale) not in self._trials:
             s, weights = _hyperbola(c, scale, _BENDS[:, None], _LOOKS[None, :])
             self._trials[c, scale] = s.ravel(), weights.ravel(), self.tilt(s.ravel())
         s, weights, found = self._trials[c, scale]
         log_moduli = self._log_mgf(found, s, d).real + np.log(np.abs(weights / s))
-        heights = log_moduli.max(axis=0).reshape(len(_BENDS), len(_LOOKS))
-        bend = float(_BENDS[np.argmin(np.logaddexp.reduce(np.where(np.isnan(heights), np.inf, heights), axis=1))])
-        if (c, scale, bend) not in self._paths:
-            self._paths[c, scale, bend] = _Path(self, c, scale, bend)
-        return self._paths[c, scale, bend]
+        heights = np.where(np.isnan(log_moduli), np.inf, log_moduli).reshape(len(d), len(_BENDS), len(_LOOKS))
+        return np.asarray(_BENDS[np.argmin(np.logaddexp.reduce(heights, axis=2), axis=1)])
 
 
-def _hyperbola(c: float, scale: float, bend: Floats | float, x: Floats) -> tuple[Values, Values]:
+def _hyperbola(c: float, scale: float, bend: Floats | float, x: Values) -> tuple[Values, Values]:
     """Points s(x) of a path and their weights s'(x)/i."""
     s = c + scale * (np.sin(bend) * (np.cosh(x) - 1.0) + 1j * np.cos(bend) * np.sinh(x))
     return s, scale * (np.cos(bend) * np.cosh(x) - 1j * np.sin(bend) * np.sinh(x))
@@ -190,6 +231,11 @@ class _Path:
 
     def integrate(self, d: Floats, sides: bool) -> tuple[Floats, Floats]:
         """Integrals of the whole and of its two sides, (3, E), and the error, (E,)."""
+        # What overflows or is not a number makes the error infinite or not a number, which is refused in the end.
+        with np.errstate(all="ignore"):
+            return self._sum(d, sides)
+
+    def _sum(self, d: Floats, sides: bool) -> tuple[Floats, Floats]:
         size = np.zeros(len(d))
         total = np.zeros((3, len(d)))
         for blocks in range(1, _BLOCKS + 1):
@@ -208,7 +254,8 @@ class _Path:
                 size += magnitudes
             factor = _STEP / 2.0**level / np.pi
             finer, whole = factor * total, factor * size
-            change = np.max(np.abs(finer - value), axis=0) / whole
+            # Sums that underflow altogether are zero to 300 decimals.
+            change = np.max(np.abs(finer - value), axis=0) / np.maximum(whole, np.finfo(np.float64).tiny)
             value = finer
             # Halving squares the relative error of a geometrically convergent sum; the power 1.5 leaves room.
             rounding = 4e-16 * np.sqrt(self._inverter.problem.n) * whole
@@ -221,15 +268,13 @@ class _Path:
         """Sums of terms (3, E), of their moduli (E,), and the last modulus (E,)."""
         s, weight, found = self._at(level, block)
         log_mgf = self._inverter._log_mgf(found, s, d)
-        with np.errstate(under="ignore"):
-            whole = np.exp(log_mgf) * (weight / s)
-            result = np.zeros((3, len(d)))
-            result[0] = whole.real.sum(axis=1)
-            if sides:
-                lower, upper = _split(found, s, d[:, 0], np.exp(log_mgf))
-                result[1] = (lower * (weight / s)).real.sum(axis=1)
-                result[2] = (upper * (weight / s)).real.sum(axis=1)
-        moduli = np.abs(whole)
+        parts = np.exp(log_mgf)[None]
+        if sides:
+            parts = np.stack([parts[0], *_split(found, s, d[:, 0], parts[0])])
+        terms = parts * (weight / s)
+        result = np.zeros((3, len(d)))
+        result[: len(terms)] = terms.real.sum(axis=2)
+        moduli = np.abs(terms).max(axis=0)
         return result, moduli.sum(axis=1), moduli[:, -1]
 
     def _at(self, level: int, block: int) -> tuple[Values, Values, Tilt]:

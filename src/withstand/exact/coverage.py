@@ -12,7 +12,7 @@ from withstand.exact.moments import expected_claim
 from withstand.exact.problem import pose
 from withstand.exact.width import expected_root
 from withstand.procedures.base import LinearProcedure
-from withstand.study.design import Design
+from withstand.study.design import Design, Floats
 from withstand.study.focus import Focus
 
 
@@ -31,7 +31,9 @@ class ExactResult:
     width : float or None
         Expected width, in error SDs; None for a joint quantity, or where it was not wanted.
     error : float
-        Bound on the absolute error of each probability, from the convergence of the sums and rounding.
+        Estimate, on the safe side, of the absolute error of each probability, from the convergence of the sums and rounding.
+    power : ndarray of shape (E,) or None
+        Rejection probabilities at the effects asked for; None where none were.
     """
 
     coverage: float
@@ -40,6 +42,7 @@ class ExactResult:
     miss_above: float | None
     width: float | None
     error: float
+    power: Floats | None = None
 
 
 def coverage(
@@ -50,6 +53,7 @@ def coverage(
     level: float,
     *,
     width: bool = True,
+    effects: Floats | None = None,
 ) -> ExactResult:
     """Coverage under normal errors with any mean shift and covariance.
 
@@ -67,6 +71,8 @@ def coverage(
         Confidence level.
     width : bool
         Whether the expected width is wanted; it takes an integral of its own.
+    effects : ndarray of shape (E, k), or (E,) for a single quantity, optional
+        Effects whose power is wanted as well, as for `power`; not for a new response.
 
     Returns
     -------
@@ -88,6 +94,10 @@ def coverage(
     inverter = Inverter(problem)
     scalar = focus.scalar
     found = inverter.probabilities(np.zeros((1, problem.k)), sides=scalar)
+    powers = None
+    if effects is not None:
+        shaped = np.asarray(effects, dtype=np.float64).reshape(-1, problem.k)
+        powers = inverter.probabilities(problem.to_unit(shaped)).beyond
     length = None
     if scalar and width:
         root = expected_root(problem, inverter.structure, expected_claim(problem))
@@ -99,4 +109,5 @@ def coverage(
         miss_above=None if found.above is None else float(found.above[0]),
         width=length,
         error=float(found.error[0]),
+        power=powers,
     )

@@ -1,7 +1,6 @@
-"""Variance estimates of few directions, or of designs small enough for eigenvalues: V as a sum of squares of normal variables."""
+"""Variance estimates of few directions, or of designs small enough for eigenvalues: V as a sum of squares of normals."""
 
 from __future__ import annotations
-
 
 import numpy as np
 from scipy.linalg import cholesky, eigh, solve_triangular
@@ -13,6 +12,9 @@ from withstand.study.design import Floats
 
 _ROWS = 4096
 """Modes handled at a time."""
+
+_DIRECTIONS = 64
+"""Rows of B carried through the covariance at a time."""
 
 
 class Modes:
@@ -73,7 +75,10 @@ def dense_modes(problem: Problem) -> Modes:
 def row_modes(problem: Problem, middle: RowsMiddle) -> Modes:
     """D = B'B with few rows B (m, n): the eigenvalues of B Sigma B'."""
     B = middle.rows
-    beta, U = eigh(B @ problem.covariance(B.T), driver="evd", overwrite_a=True)
+    inner = np.empty((len(B), len(B)))
+    for begin in range(0, len(B), _DIRECTIONS):
+        inner[:, begin : begin + _DIRECTIONS] = B @ problem.covariance(B[begin : begin + _DIRECTIONS].T)
+    beta, U = eigh(inner, driver="evd", overwrite_a=True)
     through = problem.covariance(problem.Q)
     return _from_scores(problem, beta, U.T @ (B @ problem.columns), U.T @ (B @ through), through)
 
@@ -91,5 +96,3 @@ def _from_scores(problem: Problem, beta: Floats, q: Floats, r: Floats, through: 
     root = np.sqrt(beta[kept])[:, None]
     w, u = q[kept] / root, r[kept] / root
     return Modes(beta[kept], w, u, problem.columns.T @ problem.Q - w.T @ u, problem.Q.T @ through - u.T @ u)
-
-

@@ -16,7 +16,7 @@ from withstand.procedures.base import LinearProcedure
 from withstand.study.design import Design, Floats
 from withstand.study.focus import Focus, FocusKind
 
-_CHUNK = 256
+_CHUNK = 64
 """Columns of a matrix product taken at a time."""
 
 _NO_BIAS = 1e-8
@@ -144,8 +144,9 @@ def _trace(problem: Problem, middle: Middle) -> float:
         case GroupedMiddle() if problem.correlation is not None:
             return _group_trace(middle, problem.correlation, problem.spread) + middle.ridge * float(np.sum(squares))
         case RowsMiddle():
-            inside = np.sum(middle.rows.T * problem.covariance(middle.rows.T))
-            return float(inside) + middle.ridge * float(np.sum(squares))
+            pieces = [middle.rows[begin : begin + _CHUNK] for begin in range(0, len(middle.rows), _CHUNK)]
+            inside = sum(float(np.sum(piece.T * problem.covariance(piece.T))) for piece in pieces)
+            return inside + middle.ridge * float(np.sum(squares))
         case _:
             # Column by column: nothing is known of the correlation but its products.
             return sum(_columns_trace(problem, middle, begin) for begin in range(0, problem.n, _CHUNK))

@@ -108,9 +108,7 @@ def detectable_effect(
     return float(found) * float(inverter.problem.T[0, 0])
 
 
-def _inverter(
-    procedure: LinearProcedure, design: Design, focus: Focus, disturbance: Disturbance, level: float
-) -> Inverter:
+def _inverter(procedure: LinearProcedure, design: Design, focus: Focus, disturbance: Disturbance, level: float) -> Inverter:
     if focus.kind is FocusKind.NEW:
         raise InputError(
             f"'{focus.name}' is a new response, which has no test and so no power",

@@ -110,9 +110,7 @@ _frames: WeakKeyDictionary[Design, dict[tuple[object, ...], _Frame]] = WeakKeyDi
 _criticals: WeakKeyDictionary[Design, dict[tuple[object, ...], float]] = WeakKeyDictionary()
 
 
-def pose(
-    procedure: LinearProcedure, design: Design, focus: Focus, disturbance: Disturbance, level: float | None
-) -> Problem:
+def pose(procedure: LinearProcedure, design: Design, focus: Focus, disturbance: Disturbance, level: float | None) -> Problem:
     """Bring a question into unit coordinates; `cannot` of `applicability` has been asked before.
 
     Parameters
@@ -134,14 +132,14 @@ def pose(
         If the variance estimate is of a shape not known here.
     """
     used = procedure.fitted_design(design)
-    root = np.sqrt(np.asarray(design.weights)) if procedure.weighted else np.ones(design.n)
+    root = np.ones(design.n) if not procedure.weighted or design.weights is None else np.sqrt(design.weights)
     frame = _frame(procedure, design, focus)
     k = focus.k
     critical = math.nan if level is None else _critical(procedure, design, frame.A, level)
     mean = None if disturbance.mean is None else root * disturbance.mean
     bias = -disturbance.target_shift(focus) if mean is None else frame.A @ mean - disturbance.target_shift(focus)
     residual = None if mean is None else mean - used.Q @ (used.Q.T @ mean)
-    if residual is not None and np.abs(residual).max() <= 1e-13 * np.abs(mean).max():
+    if residual is not None and mean is not None and np.abs(residual).max() <= 1e-13 * np.abs(mean).max():
         residual = None
     dependence = disturbance.dependence
     new = focus.kind is FocusKind.NEW and focus.point is not None
@@ -174,11 +172,10 @@ def _build(procedure: LinearProcedure, design: Design, focus: Focus) -> _Frame:
     used = procedure.fitted_design(design)
     A = used.estimator(focus.L)
     k = focus.k
-    O, T = qr(used.basis_rows(focus.L).T, mode="full")
-    T = T[:k]
-    flip = np.where(np.diag(T) < 0.0, -1.0, 1.0)
-    O[:, :k] *= flip
-    T = flip[:, None] * T
+    rotation, found = qr(used.basis_rows(focus.L).T, mode="full")
+    flip = np.where(np.diag(found[:k]) < 0.0, -1.0, 1.0)
+    rotation[:, :k] *= flip
+    T: Floats = np.asarray(flip[:, None] * found[:k], dtype=np.float64)
     unit = float(T[0, 0]) ** 2 if k == 1 else 1.0
     new = focus.kind is FocusKind.NEW and focus.point is not None
     if k == 1:
@@ -187,7 +184,7 @@ def _build(procedure: LinearProcedure, design: Design, focus: Focus) -> _Frame:
         middle = DiagonalMiddle(np.full(design.n, 1.0 / used.df))
     if middle is None:
         raise TypeError(f"the variance estimate of '{procedure.name}' has no exact answers")
-    return _Frame(A, np.ascontiguousarray(used.Q @ np.roll(O, -k, axis=1)), T, middle, unit)
+    return _Frame(A, np.ascontiguousarray(used.Q @ np.roll(rotation, -k, axis=1)), T, middle, unit)
 
 
 def _critical(procedure: LinearProcedure, design: Design, A: Floats, level: float) -> float:

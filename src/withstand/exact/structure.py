@@ -26,8 +26,14 @@ DENSE_ROWS = 2000
 MOST_DIRECTIONS = 2000
 """Up to this many squares a variance estimate is reduced to the eigenvalues of their covariance."""
 
+_MOST_ELEMENTS = 1 << 26
+"""Largest number of rows times squares (0.5 GB)."""
+
 _QUICKER_DENSE = {DiagonalMiddle: 120, BandMiddle: 500}
 """Below this many rows the eigenvalue route is quicker than the sweep along a chain or band (measured, one thread)."""
+
+_SWEEP_WORK = 1 << 27
+"""Largest n (lags + columns)^2 of a sweep down a band (about a minute)."""
 
 
 def structure_of(problem: Problem) -> Structure:
@@ -44,12 +50,12 @@ def structure_of(problem: Problem) -> Structure:
             return RowSums(columns, p, middle.d, spread, correlation.icc, correlation.codes)
         case DiagonalMiddle() if isinstance(correlation, Chain) and problem.n > _QUICKER_DENSE[DiagonalMiddle]:
             return TridiagonalSolves(columns, p, middle.d, spread, correlation)
-        case BandMiddle() if _in_row_order(plain, correlation) and problem.n > _QUICKER_DENSE[BandMiddle]:
+        case BandMiddle() if _in_row_order(plain, correlation) and _sweeps(problem.n, len(middle.lags)):
             links = correlation.links if isinstance(correlation, Chain) else np.zeros(problem.n)
             return BandSweep(columns, p, middle.lags, spread, links)
         case GroupedMiddle() if middle.ridge == 0.0 and _within(plain, correlation, middle.codes):
             return group_modes(problem, middle)
-        case GroupedMiddle() if middle.ridge == 0.0 and middle.codes.max() < min(problem.n // 2, MOST_DIRECTIONS):
+        case GroupedMiddle() if middle.ridge == 0.0 and middle.codes.max() < problem.n // 2:
             return row_modes(problem, middle.as_rows())
         case RowsMiddle() if middle.ridge == 0.0 and len(middle.rows) < problem.n // 2:
             return row_modes(problem, middle)
@@ -86,7 +92,7 @@ def can_be_exact(procedure: Procedure, focus: Focus, disturbance: Disturbance) -
     refusal = procedure.not_applicable(design, focus)
     if refusal is not None:
         return f"the procedure is {refusal}"
-    if design.n <= DENSE_ROWS or not focus.scalar:
+    if design.n <= DENSE_ROWS:
         return None
     used = procedure.fitted_design(design)
     new = focus.kind is FocusKind.NEW
@@ -94,19 +100,32 @@ def can_be_exact(procedure: Procedure, focus: Focus, disturbance: Disturbance) -
     correlation = None if disturbance.dependence is None else correlation_of(disturbance.dependence)
     if not plain and correlation is None:
         fits = False
+    elif not focus.scalar:
+        fits = True
     else:
         match procedure.form(used, used.estimator(focus.L)):
             case Diagonal():
                 fits = True
             case Banded() as form:
-                fits = len(form.lag_weights) == 1 or _in_row_order(plain, correlation)
+                lags = len(form.lag_weights)
+                fits = lags == 1 or (_in_row_order(plain, correlation) and design.n * (lags + design.p) ** 2 <= _SWEEP_WORK)
             case Grouped() as form:
-                fits = not new and (_within(plain, correlation, form.codes) or form.codes.max() < MOST_DIRECTIONS)
+                fits = not new and (_within(plain, correlation, form.codes) or _affordable(int(form.codes.max()) + 1, design.n))
             case Squares() as form:
-                fits = not new and form.rows.shape[1] <= MOST_DIRECTIONS
+                fits = not new and _affordable(form.rows.shape[1], design.n)
             case _:
                 fits = False
     return None if fits else f"{design.n} rows are too many for this variance estimate with these errors"
+
+
+def _affordable(directions: int, n: int) -> bool:
+    """Whether a variance estimate of that many squares may be written out."""
+    return directions <= MOST_DIRECTIONS and directions * n <= _MOST_ELEMENTS
+
+
+def _sweeps(n: int, lags: int) -> bool:
+    """Whether the sweep down a band beats the eigenvalue route, or that route is out of reach."""
+    return n > DENSE_ROWS or (n > _QUICKER_DENSE[BandMiddle] and 10 * lags < n)
 
 
 def _in_row_order(plain: bool, correlation: Correlation | None) -> bool:

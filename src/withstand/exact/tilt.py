@@ -83,21 +83,27 @@ class Tilt:
         Returns
         -------
         ndarray of shape (E, t)
+
+        Notes
+        -----
+        With F = precision - 2 s, completing the square leaves b'F^-1 b / 2 + 2 s d'F^-1 b + s d'F^-1 P d in the exponent
+        (b linear, P precision), in which nothing cancels for large s.
         """
         k = self.linear.shape[1]
         s = np.asarray(s) * np.ones(self.log_mass.shape)
-        precision = self.precision - 2.0 * s[:, None, None] * np.eye(k)
-        linear = self.linear + 2.0 * s[:, None] * d[:, None, :]
         if k == 1:
-            log_pivots = np.log(precision[:, 0, 0])
-            energy = linear[:, :, 0] ** 2 / precision[:, 0, 0]
-        else:
-            log_pivots, _ = eliminate(np.moveaxis(precision, 0, 2).copy(), k)
-            usable = np.isfinite(log_pivots)
-            solved = np.full(linear.shape, np.nan, dtype=linear.dtype)
-            solved[:, usable] = np.linalg.solve(precision[usable], linear[:, usable, :, None])[..., 0]
-            energy = np.sum(linear * solved, axis=2)
-        return self.log_mass - 0.5 * log_pivots + 0.5 * energy + s * np.sum(d**2, axis=1)[:, None]
+            P, b = self.precision[:, 0, 0], self.linear[:, 0]
+            F = P - 2.0 * s
+            return self.log_mass - 0.5 * np.log(F) + (0.5 * b**2 + s * d * (2.0 * b + P * d)) / F
+        F = self.precision - 2.0 * s[:, None, None] * np.eye(k)
+        log_pivots, _ = eliminate(np.moveaxis(F, 0, 2).copy(), k)
+        usable = np.isfinite(log_pivots)
+        right = np.concatenate([self.linear[:, :, None], self.precision @ d.T], axis=2)
+        solved = np.full(right.shape, np.nan, dtype=right.dtype)
+        solved[usable] = np.linalg.solve(F[usable], right[usable])
+        own, moved = solved[:, :, 0], solved[:, :, 1:]
+        energy = 0.5 * np.sum(self.linear * own, axis=1) + 2.0 * s * (d @ own.T)
+        return self.log_mass - 0.5 * log_pivots + energy + s * np.einsum("ek,tke->et", d, moved)
 
     def at(self, index: Values) -> Tilt:
         """The tilt at some of the theta."""

@@ -3,14 +3,15 @@
 from __future__ import annotations
 
 import math
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy.special import gammaln
 
 from withstand.errors import NumericalError
 from withstand.exact.problem import Problem
 from withstand.exact.tilt import Structure, tilt
-from withstand.study.design import Floats
 
 _WANTED = 1e-8
 _START = -18.0
@@ -46,7 +47,7 @@ def expected_root(problem: Problem, structure: Structure, mean: float) -> float:
     df = problem.n - problem.p
     known = math.sqrt(mean) * math.exp(gammaln((df + 1) / 2) - gammaln(df / 2) + 0.5 * math.log(2.0 / df))
 
-    def total(x: Floats) -> tuple[float, float]:
+    def total(x: NDArray[Any]) -> tuple[float, float]:
         t = np.exp(x) / mean
         reference = np.exp(-0.5 * df * np.log1p(2.0 * t * mean / df))
         own = np.exp(tilt(structure, 2.0 * t, problem.k, 0.0).log_laplace())

@@ -8,13 +8,17 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Mapping, Sequence
 
-from withstand.judgement.detectability import Detectability
+from withstand.judgement.detectability import Detectability, Hazard, hazard
 from withstand.judgement.limit import Cure
+from withstand.judgement.plausible import Plausible
 from withstand.judgement.ranking import Spot, Threat
 from withstand.judgement.verdict import Verdict
 
 Say = Callable[[str, float], str]
 """Says a severity of the named departure as a person would: 'SD ratio 2', 't with 5 df'."""
+
+_NORMAL = 1.96
+"""97.5 % point of the normal law."""
 
 _NAMED = 4
 """Departures named in one sentence; the others are counted."""
@@ -91,28 +95,70 @@ def headline(
 def _worry(n: int, interval: str, first: Threat, say: Say) -> str:
     worst = first.worst
     turn = first.tipping.point if first.tipping.point is not None else first.tipping.first_gives
+    neutral = first.tipping.neutral
     if first.tipping.always:
         gives = "it is out of tolerance even when nothing is wrong"
     elif turn is None:
         gives = f"it gives at {say(first.departure, worst.severity)}"
+    elif turn < neutral:
+        gives = f"it gives from {say(first.departure, turn)} down"
     else:
         gives = f"it gives beyond {say(first.departure, turn)}"
     allowed = first.plausible
+    there = _where(first, say)
     if allowed is None:
-        reach = f"at {say(first.departure, worst.severity)}, the worst tried,"
+        reach = f"{there}, the worst tried,"
     elif allowed.empty:
-        reach = f"your residuals fit no severity well; at the nearest, {say(first.departure, worst.severity)},"
+        reach = f"your residuals fit no severity well; {there}, the nearest,"
     else:
-        to = f"{say(first.departure, allowed.high)} and beyond" if allowed.open_above else say(first.departure, allowed.high)
-        reach = f"your residuals allow {say(first.departure, allowed.low)} to {to}; at {say(first.departure, worst.severity)}"
-    covers = f"it covers {_percent(worst)} %"
+        reach = f"your residuals allow {_allowed(first, allowed, say)}; {there}"
     rows = {Cure.NEVER: "; more rows are no cure", Cure.FADES: "; it fades with more rows", Cure.SLOWLY: "; rows help slowly"}
     cure = "" if first.limit is None else rows[first.limit.cure]
-    return f"Worry first about {first.departure}: with these {n} rows, for {interval}, {gives}; {reach} {covers}{cure}."
+    return (
+        f"Worry first about {first.departure}: with these {n} rows, for {interval}, {gives}; {reach} it {_does(worst)}{cure}."
+    )
+
+
+def _where(threat: Threat, say: Say) -> str:
+    severity = threat.worst.severity
+    return "with nothing wrong" if severity == threat.tipping.neutral else f"at {say(threat.departure, severity)}"
+
+
+def _does(spot: Spot) -> str:
+    """What the procedure does there, by the measure that decided the verdict."""
+    deciding = spot.judgement.deciding
+    match deciding.measure:
+        case "size":
+            return f"rejects a true null hypothesis in {_percent(spot, deciding.value)} %"
+        case "miss_below" | "miss_above":
+            side = "below" if deciding.measure == "miss_below" else "above"
+            return f"lies wholly {side} the true value in {_percent(spot, deciding.value)} %"
+        case "bias_in_sd":
+            return f"covers {_percent(spot, spot.share)} %, with a bias of {deciding.value:.2g} SD of the estimate"
+        case "bias":
+            return f"covers {_percent(spot, spot.share)} %, with a bias of {deciding.value:.3g}"
+    return f"covers {_percent(spot, spot.share)} %"
+
+
+def _allowed(threat: Threat, allowed: Plausible, say: Say) -> str:
+    """A range of severities; what the label of its end repeats of that of its start is left out."""
+    low, high = (say(threat.departure, end) for end in (allowed.low, allowed.high))
+    if allowed.open_below and allowed.open_above:
+        return "any severity"
+    if allowed.open_below:
+        return f"{high} and anything below"
+    if allowed.open_above:
+        return f"{low} and anything beyond"
+    shared = 0
+    for a, b in zip(low.split(), high.split(), strict=False):
+        if a != b:
+            break
+        shared += 1
+    return f"{low} to {' '.join(high.split()[shared:])}" if low != high else low
 
 
 def _with_severity(threat: Threat, say: Say) -> str:
-    return f"{threat.departure} ({_percent(threat.worst)} % at {say(threat.departure, threat.worst.severity)})"
+    return f"{threat.departure} ({_does(threat.worst)} {_where(threat, say)})"
 
 
 def _how_far(threats: Sequence[Threat]) -> str:
@@ -122,14 +168,15 @@ def _how_far(threats: Sequence[Threat]) -> str:
 
 
 def _hidden(giving: Sequence[Threat], seen: Mapping[str, Detectability], say: Say) -> list[str]:
-    hidden = [t.departure for t in giving if t.departure in seen and seen[t.departure].hard_to_see]
+    known = [t.departure for t in giving if t.departure in seen]
+    hidden = [name for name in known if hazard(True, seen[name]) is Hazard.HIDDEN]
     if not hidden:
         return []
     worst = min(hidden, key=lambda name: seen[name].power)
     found = seen[worst]
     others = f" The same goes for {_listing([name for name in hidden if name != worst])}." if len(hidden) > 1 else ""
     return [
-        f"Harmful and hard to see: a check of the residuals shows {worst} at {say(worst, found.severity)} in "
+        f"{str(Hazard.HIDDEN).capitalize()}: a check of the residuals shows {worst} at {say(worst, found.severity)} in "
         f"{round(100 * found.power)} of 100 such studies.{others}"
     ]
 
@@ -140,9 +187,13 @@ def _instead(giving: Sequence[Threat], throughout: tuple[str, float] | None) -> 
     name, premium = throughout
     if name:
         return [f"{name} holds throughout{_price(premium)}."]
-    found = [f"{t.holding} under {t.departure}{_price(t.premium)}" for t in giving if t.holding]
-    if not found:
+    where: dict[tuple[str, float], list[str]] = {}
+    for threat in giving:
+        if threat.holding:
+            where.setdefault((threat.holding, threat.premium), []).append(threat.departure)
+    if not where:
         return ["No procedure tried holds under any of these."]
+    found = [f"{name} under {_listing(departures)}{_price(premium)}" for (name, premium), departures in where.items()]
     return [f"No procedure tried holds throughout; what holds is {_listing(found, '; ')}."]
 
 
@@ -155,13 +206,19 @@ def _price(premium: float) -> str:
     return f", with intervals {abs(percent)} % {'wider' if percent > 0 else 'narrower'} when nothing is wrong"
 
 
-def _percent(spot: Spot) -> str:
-    """The coverage in percent, with as many decimals as it takes to lie on its own side of the bound it is judged by."""
-    deciding = spot.judgement.deciding
-    decimals = 1
-    while decimals < 5 and deciding.measure == "coverage" and _same(spot.share, deciding.bound, decimals):
+def _percent(spot: Spot, share: float) -> str:
+    """A share in percent, with the half-width of its 95 % Monte Carlo interval where it is simulated.
+
+    It has as many decimals as it takes to lie on its own side of the bound it is judged by.
+    """
+    decimals, bound = 1, spot.judgement.deciding.bound
+    while decimals < 5 and _same(share, bound, decimals):
         decimals += 1
-    return f"{100.0 * spot.share:.{decimals}f}"
+    told = f"{100.0 * share:.{decimals}f}"
+    if spot.exact:
+        return told
+    reach = 100.0 * _NORMAL * spot.mc_se
+    return f"{told} ± {max(reach, 10.0**-decimals):.{decimals}f}"
 
 
 def _same(a: float, b: float, decimals: int) -> bool:

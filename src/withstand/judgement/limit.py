@@ -15,12 +15,14 @@ from enum import StrEnum
 import numpy as np
 from scipy import stats
 
+from withstand.departures.base import OutlierDeparture
 from withstand.departures.outliers import Outliers
 from withstand.departures.world import Disturbance, World
 from withstand.errors import InputError
 from withstand.exact import moments
 from withstand.judgement.findings import Aspect
 from withstand.procedures.base import LinearProcedure, Procedure
+from withstand.study.design import Design
 from withstand.study.focus import Focus, FocusKind
 from withstand.study.growth import Growth
 from withstand.study.study import Study
@@ -146,12 +148,14 @@ def limit_of(studies: Sequence[Study], procedure: Procedure, focus: Focus, world
     if len(studies) < 3 or any(procedure.not_applicable(study.design, focus) for study in studies):
         return None
     level = studies[0].level
+    # Outliers add to the true and to the claimed variance alike in the limit; their bias is worked out apart.
+    calm = World(tuple((departure, s) for departure, s in world.stack if not isinstance(departure, OutlierDeparture)))
     line = replace(focus, kind=FocusKind.MEAN) if focus.kind is FocusKind.NEW else focus
     stages = []
     for study in studies:
-        realised = world.on(study.design)
+        realised = calm.on(study.design)
         found = moments(procedure, study.design, line, realised)
-        struck = _outlier_bias(realised, procedure, line)
+        struck = _outlier_bias(world, study.design, procedure, line)
         if found is None or struck is None:
             return None
         sd = math.sqrt(found.variance)
@@ -183,18 +187,20 @@ def doublings(growth: Growth) -> list[Study]:
     return studies
 
 
-def _outlier_bias(realised: Disturbance, procedure: LinearProcedure, focus: Focus) -> float | None:
-    """Mean shift of the estimate by outliers, in error SDs, which the moments leave out; None where it is not known.
+def _outlier_bias(world: World, design: Design, procedure: LinearProcedure, focus: Focus) -> float | None:
+    """Mean shift of the estimate by outliers, in error SDs; None where it is not known.
 
     A given count of rows is a vanishing share of a growing study. A share of rows struck at random, one-sidedly, moves the mean
     of all errors alike.
     """
     bias = 0.0
-    for departure, severity in realised.world.stack:
+    for departure, severity in world.stack:
+        if isinstance(departure, OutlierDeparture) and not isinstance(departure, Outliers):
+            return None
         if isinstance(departure, Outliers) and departure.share is not None:
             if departure.placement != "random":
                 return None
-            a = procedure.fitted_design(realised.design).estimator(focus.L)[0]
+            a = procedure.fitted_design(design).estimator(focus.L)[0]
             level = float(a.sum()) if abs(a.sum()) > 1e-9 * np.abs(a).sum() else 0.0
             bias += departure.share * severity * level if departure.sign == "one-sided" else 0.0
     return bias

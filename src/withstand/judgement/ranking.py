@@ -74,19 +74,9 @@ class Threat:
     holding: str
     premium: float
 
-    @property
-    def harm(self) -> float:
-        """Coverage lost at the worst severity, 0 where none is."""
-        return max(0.0, -self.worst.shift)
-
-    @property
-    def gives_within_reach(self) -> bool:
-        """Whether the procedure gives at a severity that the residuals allow (that was tried, where they do not say)."""
-        return self.worst.judgement.verdict is Verdict.GIVES
-
 
 def worst_of(spots: Iterable[Spot]) -> Spot:
-    """The spot that loses most; of equals, the one with the smallest margin.
+    """The spot to worry about most: one that gives before one that does not, then the one that loses most.
 
     Parameters
     ----------
@@ -96,12 +86,16 @@ def worst_of(spots: Iterable[Spot]) -> Spot:
     return min(spots, key=_badness)
 
 
-def _badness(spot: Spot) -> tuple[float, float]:
-    return min(spot.shift, 0.0), spot.judgement.margin
+_ORDER = {Verdict.GIVES: 0, Verdict.UNSETTLED: 1, Verdict.HOLDS: 2}
+
+
+def _badness(spot: Spot) -> tuple[int, float, float]:
+    """A bias may put a spot out of tolerance while its coverage is above nominal; the verdict therefore comes first."""
+    return _ORDER[spot.judgement.verdict], min(spot.shift, 0.0), spot.judgement.margin
 
 
 def ranked(threats: Iterable[Threat]) -> list[Threat]:
-    """Threats in the order of what to worry about first: most harm, then smallest margin, then name."""
+    """Threats in the order of what to worry about first: those that give, then most coverage lost, then smallest margin."""
     return sorted(threats, key=lambda t: (*_badness(t.worst), t.departure))
 
 

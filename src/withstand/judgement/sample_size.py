@@ -14,7 +14,7 @@ import numpy as np
 from scipy import stats
 
 from withstand.judgement.crossing import crossings
-from withstand.judgement.size_points import FoundSize, Requirement, SizePoint, Sizes
+from withstand.judgement.size_points import LOOKS, FoundSize, Requirement, SizePoint, Sizes
 
 FINE = 1.06
 """Bisection of simulated margins ends when the ends of the bracket are within this ratio."""
@@ -76,7 +76,7 @@ class SizeSearch:
         """-1 where something clearly is not met, 1 where all clearly is, 0 between."""
         if n not in self._points:
             self._points[n] = self._judge(n)
-        z = self._z(max(len(self._points), 8))
+        z = self._z(max(len(self._points), LOOKS))
         clear = 1
         for requirement in self._requirements:
             reading = self._points[n].readings[requirement.key]

@@ -95,9 +95,3 @@ def next_step(standings: Mapping[K, Standing], looks: Looks) -> Step[K] | None:
         return None
     look = min(waiting)
     return Step(tuple(waiting[look]), looks.target(look))
-
-
-def work_left(standings: Mapping[K, Standing], looks: Looks) -> int:
-    """Replicates still needed if every open cell goes to the cap: the most that can be left, for a progress display."""
-    step_cells = [s for s in standings.values() if not s.settled or looks.reached(s.replicates) == 0]
-    return sum(max(0, looks.most - s.replicates) for s in step_cells)

@@ -7,6 +7,10 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 
+LOOKS = 16
+"""Numbers of rows that a search is expected to look at: each is told apart from its bound with that share of the error."""
+
+
 @dataclass(frozen=True)
 class Requirement:
     """A bound that a measure must keep.

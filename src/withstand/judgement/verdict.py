@@ -91,7 +91,7 @@ def judge_exact(values: Mapping[str, float], aspects: Mapping[str, Aspect]) -> J
     aspects : mapping of str to Aspect
         What is accepted.
     """
-    findings = tuple(Finding.of(aspects[m], v, v, v) for m, v in values.items() if m in aspects)
+    findings = tuple(Finding.of(aspect, values[m], values[m], values[m]) for m, aspect in aspects.items() if m in values)
     return Judgement(_combine(findings), findings, exact=True, replicates=0)
 
 

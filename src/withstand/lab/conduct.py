@@ -13,6 +13,7 @@ from withstand.judgement.verdict import Judgement
 from withstand.lab.account import library_versions, study_facts, tolerance_record
 from withstand.lab.frames import measures_frame
 from withstand.lab.gather import Effort, Evidence, gather, open_bench
+from withstand.lab.glance import glance
 from withstand.lab.grid import Cell, Grid
 from withstand.lab.judging import verdicts_frame
 from withstand.lab.outcome import Outcome
@@ -39,7 +40,8 @@ def conduct(study: Study, plan: Plan, effort: Effort | None = None, *, simulate:
     effort : Effort, optional
         How and where to compute; in this process and without a file if left out.
     simulate : bool
-        False uses exact answers and what the ledger already holds: seconds instead of minutes, and for half-finished runs.
+        False uses exact answers and what the ledger already holds, for half-finished runs. Without a ledger only the procedure
+        judged most closely is then looked at throughout, in seconds, and the others where it does not hold.
 
     Returns
     -------
@@ -60,10 +62,13 @@ def conduct(study: Study, plan: Plan, effort: Effort | None = None, *, simulate:
     residuals = residuals_of(grid)
     effort.progress.step()
     grid = grid.at(points_of(grid.possible, residuals))
-    with open_bench(grid, effort) as bench:
-        evidence = gather(grid, bench)
-        tippings = find_tippings(evidence, bench, leading(grid))
     names = {axis.identity: shown(axis, study.roles) for axis in grid.possible}
+    if effort.simulate or effort.ledger_path is not None:
+        with open_bench(grid, effort) as bench:
+            evidence = gather(grid, bench)
+            tippings = find_tippings(evidence, bench, leading(grid))
+    else:
+        evidence, tippings = glance(grid, residuals, names, leading(grid))
     assessment = Assessment(evidence, residuals, tippings, names)
     threats = assessment.threats()
     verdicts = {cell: judgement for cell in evidence.cells if (judgement := evidence.verdict(cell)) is not None}
@@ -71,7 +76,7 @@ def conduct(study: Study, plan: Plan, effort: Effort | None = None, *, simulate:
         title=study.name,
         measures=measures_frame(grid, ((cell, evidence.answers(cell)) for cell in evidence.cells)),
         verdicts=verdicts_frame(grid, verdicts),
-        tipping=tipping_frame(grid, residuals, tippings, threats),
+        tipping=tipping_frame(grid, residuals, tippings, threats, leading(grid)),
         ranking=ranking_frame(assessment, threats),
         headline=_headline(assessment, threats, residuals),
         facts=facts | {"axes": _axes(grid, names)},
@@ -117,11 +122,17 @@ def _headline(assessment: Assessment, threats: Sequence[Threatened], residuals: 
     return tuple(sentences)
 
 
-def _axes(grid: Grid, names: Mapping[str, str]) -> list[dict[str, str]]:
-    """Axes as the tables name them, with the name that people see."""
+def _axes(grid: Grid, names: Mapping[str, str]) -> list[dict[str, Any]]:
+    """Axes as the tables name them, with the name that people see and the ladder."""
     return [
-        {"departure": a.departure.kind, "along": grid.along(a), "stack": a.stack, "name": names[a.identity]}
-        for a in grid.possible
+        {
+            "departure": axis.departure.kind,
+            "along": grid.along(axis),
+            "stack": axis.stack,
+            "name": names[axis.identity],
+            "ladder": [[severity, axis.departure.label(severity)] for severity in axis.departure.ladder],
+        }
+        for axis in grid.possible
     ]
 
 
@@ -166,6 +177,7 @@ def _provenance(grid: Grid, evidence: Evidence, effort: Effort, verdicts: Mappin
         "most": grid.looks.most,
         "wrong_verdict": plan.wrong_verdict,
         "method": plan.method,
+        "procedures": [procedure.identity for procedure in plan.procedures],
         "workers": effort.workers,
         "exact_cells": sum(judgement.exact for judgement in verdicts.values()),
         "simulated_cells": sum(not judgement.exact for judgement in verdicts.values()),

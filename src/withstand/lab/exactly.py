@@ -2,17 +2,18 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable
 
-import numpy as np
-
 from withstand.departures.world import Disturbance
-from withstand.exact import can_be_exact, coverage, moments, power
-from withstand.lab.frames import Answer, CellAnswers
+from withstand.errors import NumericalError
+from withstand.exact import ExactResult, Moments, can_be_exact, coverage, moments
+from withstand.lab import frames
+from withstand.lab.frames import CellAnswers
 from withstand.lab.grid import Cell, Grid
 from withstand.measures.compute import Estimate
 from withstand.measures.names import applicable_measures
-from withstand.procedures.base import LinearProcedure
+from withstand.procedures.base import Answer, LinearProcedure
 from withstand.study.study import Study
 
 
@@ -46,7 +47,7 @@ def exact_answers(grid: Grid, cells: Iterable[Cell]) -> dict[Cell, CellAnswers]:
         base = baselines.get((cell.procedure_index, cell.focus_index), {})
         if values:
             answers[cell] = {
-                name: Answer(_exactly(value, value - base.get(name, np.nan)), "exact", 0, 0)
+                name: frames.Answer(_exactly(value, value - base.get(name, math.nan)), "exact", 0, 0)
                 for name in applicable_measures(cell.procedure, cell.focus)
                 if (value := values.get(name)) is not None
             }
@@ -58,35 +59,46 @@ def _exactly(value: float, shift: float) -> Estimate:
 
 
 def _values(study: Study, cell: Cell, disturbance: Disturbance) -> dict[str, float]:
-    """Measures by name, in the unit of the focal quantity."""
+    """Measures by name, in the unit of the focal quantity; more than are applicable, perhaps."""
     procedure, focus = cell.procedure, cell.focus
     if not isinstance(procedure, LinearProcedure):
         return {}
-    unit = study.error_sd
-    values: dict[str, float] = {}
-    found = moments(procedure, study.design, focus, disturbance) if focus.scalar else None
-    if found is not None:
-        sd = float(np.sqrt(found.variance))
-        claimed = float(np.sqrt(found.claimed_variance))
-        values |= {
-            "bias": unit * found.bias,
-            "bias_in_sd": found.bias / sd,
-            "empirical_sd": unit * sd,
-            "claimed_sd": unit * claimed,
-            "se_ratio": claimed / sd,
-            "rmse": unit * float(np.hypot(sd, found.bias)),
-            "failure_rate": 0.0,
-        }
+    values = _from_moments(moments(procedure, study.design, focus, disturbance), study.error_sd)
     if can_be_exact(procedure, focus, disturbance) is None:
-        result = coverage(procedure, study.design, focus, disturbance, study.level)
-        values |= {"coverage": result.coverage, "size": 1.0 - result.coverage, "failure_rate": 0.0}
-        if result.miss_below is not None and result.miss_above is not None:
-            values |= {"miss_below": result.miss_below, "miss_above": result.miss_above}
-        if result.width is not None:
-            values["width"] = unit * result.width
-        if focus.effect is not None:
-            stated = focus.effect[None, :] / unit
-            values["power"] = float(power(procedure, study.design, focus, disturbance, study.level, stated)[0])
+        tested = focus.effect is not None and Answer.TEST in procedure.answers(focus)
+        effects = focus.effect[None, :] / study.error_sd if tested and focus.effect is not None else None
+        try:
+            result = coverage(procedure, study.design, focus, disturbance, study.level, effects=effects)
+        except NumericalError:
+            # The accuracy is out of reach, so the cell is simulated, and its column `method` says so.
+            return values
+        values |= _from_result(result, study.error_sd)
+    return values
+
+
+def _from_moments(found: Moments | None, unit: float) -> dict[str, float]:
+    if found is None:
+        return {}
+    sd, claimed = math.sqrt(found.variance), math.sqrt(found.claimed_variance)
+    return {
+        "bias": unit * found.bias,
+        "bias_in_sd": found.bias / sd,
+        "empirical_sd": unit * sd,
+        "claimed_sd": unit * claimed,
+        "se_ratio": claimed / sd,
+        "rmse": unit * math.hypot(sd, found.bias),
+        "failure_rate": 0.0,
+    }
+
+
+def _from_result(result: ExactResult, unit: float) -> dict[str, float]:
+    values = {"coverage": result.coverage, "size": result.size, "failure_rate": 0.0}
+    if result.miss_below is not None and result.miss_above is not None:
+        values |= {"miss_below": result.miss_below, "miss_above": result.miss_above}
+    if result.width is not None:
+        values["width"] = unit * result.width
+    if result.power is not None:
+        values["power"] = float(result.power[0])
     return values
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping, Sequence
 from concurrent.futures import Executor
 
 import pandas as pd
@@ -9,7 +10,7 @@ import pandas as pd
 from withstand.errors import ScenarioError
 from withstand.lab.observed import instead_of_observed_power
 from withstand.lab.progress import Progress
-from withstand.lab.size_answer import CURVE_COLUMNS, SizeAnswer
+from withstand.lab.size_answer import CURVE_COLUMNS, ProcedureSize, SizeAnswer
 from withstand.lab.size_plan import NO_EFFECT
 from withstand.lab.size_question import SizeQuestion
 from withstand.lab.size_search import ProcedureSearch
@@ -25,7 +26,9 @@ def size_once(question: SizeQuestion, executor: Executor, progress: Progress) ->
     """
     _refuse_impossible(question)
     _refuse_observed_power(question)
-    sizes, frames, asked = [], [], dict[str, None]()
+    sizes: list[ProcedureSize] = []
+    frames: list[dict[str, object]] = []
+    asked: dict[str, None] = {}
     for procedure in question.procedures:
         requirements = question.requirements(procedure)
         asked |= dict.fromkeys(requirement.words for requirement in requirements)
@@ -37,14 +40,19 @@ def size_once(question: SizeQuestion, executor: Executor, progress: Progress) ->
         question.focus.name,
         tuple(asked),
         tuple(sizes),
-        pd.DataFrame(frames, columns=list(CURVE_COLUMNS)).sort_values(
-            ["procedure", "world", "measure", "n"], ignore_index=True
-        ),
+        _curve(frames),
         question.growth.sentence,
         1.0 - question.effort.delta,
         question.study.notices,
         None if question.study.grow is not None else question.study.n,
     )
+
+
+def _curve(rows: Sequence[Mapping[str, object]]) -> pd.DataFrame:
+    frame = pd.DataFrame(rows, columns=list(CURVE_COLUMNS))
+    # Nothing is looked at where the limit answers; the columns are of numbers all the same.
+    frame = frame.astype(dict.fromkeys(["value", "mc_se", "low", "high", "needed_low", "needed_high"], float))
+    return frame.sort_values(["procedure", "world", "measure", "n"], ignore_index=True)
 
 
 def _refuse_observed_power(question: SizeQuestion) -> None:

@@ -10,7 +10,7 @@ from dataclasses import dataclass, field, replace
 from scipy import stats
 
 from withstand.engine.ledger import Ledger
-from withstand.judgement.size_points import Reading, Requirement
+from withstand.judgement.size_points import LOOKS, Reading, Requirement
 from withstand.judgement.verdict import spending
 from withstand.lab.frames import CellAnswers
 from withstand.lab.gather import Bench, Evidence, gather
@@ -114,7 +114,7 @@ class Look:
     def _clear(self, requirement: Requirement, found: Mapping[str, CellAnswers], look: int) -> bool:
         """Whether the margin can be told from zero; the looks share the accepted chance of error."""
         seen = reading(found[self._key(requirement)], requirement.measure)
-        chance = spending(self.effort.delta, look) / len(self.requirements)
+        chance = spending(self.effort.delta, look) / (LOOKS * len(self.requirements))
         return abs(requirement.margin(seen.value)) > float(stats.norm.isf(chance / 2.0)) * seen.se
 
 

@@ -14,11 +14,12 @@ from withstand.engine.noise import design_generator
 from withstand.lab.exactly import exact_answers
 from withstand.lab.frames import Answer, CellAnswers
 from withstand.lab.grid import Cell, Grid
-from withstand.measures.compute import Estimate
+from withstand.measures.compute import COUNTED, Estimate
 from withstand.study.design import Design
+from withstand.study.planning import PlannedRows
 from withstand.study.rows import FixedRows
 
-TABLES = (24, 48, 96, 192, 384)
+TABLES = (24, 48, 96)
 """Tables drawn at each look where an answer is exact given the table."""
 
 _TABLE_WIDTH = 200
@@ -72,14 +73,17 @@ class TableAverage:
 
     def extend(self, tables: int) -> Mapping[str, CellAnswers]:
         """Answers from so many tables, by key of the world; a measure without an exact answer in some table is left out."""
-        for table in range(self._done, tables):
-            given = self._on(self._grid.study.rows.draw(design_generator(self._grid.plan.seed, table)))
+        generators = [design_generator(self._grid.plan.seed, table) for table in range(self._done, tables)]
+        rows = self._grid.study.rows
+        drawn = rows.draw_all(generators) if isinstance(rows, PlannedRows) else map(rows.draw, generators)
+        for design in drawn:
+            given = self._on(design)
             for key, values in self._values.items():
                 for name, answer in given[key].items():
                     values.setdefault(name, []).append(answer.estimate.value)
         self._done = tables
         return {
-            key: {name: _mean(seen) for name, seen in values.items() if len(seen) == tables}
+            key: {name: _mean(seen) for name, seen in values.items() if len(seen) == tables or _among_answers(name, seen)}
             for key, values in self._values.items()
         }
 
@@ -88,7 +92,7 @@ class TableAverage:
         here = TableGrid(replace(grid.study, design=design, rows=FixedRows(design)), grid.plan)
         if here.impossible:
             return dict.fromkeys(self._values, _REFUSED)
-        cells = tuple(here.cells)
+        cells = [cell for cell in here.cells if here.place(cell) in self._values]
         if not cells:
             # The procedure does not apply to this table.
             return dict.fromkeys(self._values, _REFUSED)
@@ -101,6 +105,11 @@ _REFUSED: CellAnswers = {
     for name, value in {"coverage": 0.0, "size": 0.0, "power": 0.0, "failure_rate": 1.0}.items()
 }
 """A table on which the procedure has no answer counts as not covering and not rejecting, as everywhere."""
+
+
+def _among_answers(name: str, seen: Sequence[float]) -> bool:
+    """Whether a mean over the tables with an answer is what the measure is."""
+    return name not in COUNTED and len(seen) > 1
 
 
 def _mean(seen: Sequence[float]) -> Answer:

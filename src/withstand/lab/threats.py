@@ -81,11 +81,16 @@ class Assessment:
         return found
 
     def throughout(self, focus: int, reference: int) -> tuple[str, float] | None:
-        """The cheapest procedure that holds at every severity to be feared, with its premium; None if there is one only."""
-        if len(self.grid.plan.procedures) < 2:
-            return None
+        """The cheapest procedure that holds at every severity to be feared, with its premium.
+
+        The name is empty where none does; None where that cannot be said, or only one was judged.
+        """
+        plan = self.grid.plan
         everywhere = [(axis, severity) for axis in self.grid.possible for severity in self._feared(axis)]
-        return self._cheapest(everywhere, reference, focus)
+        found = self._cheapest(everywhere, reference, focus)
+        asked = [i for i in range(len(plan.procedures)) if (i, focus) not in self.grid.job.refusals]
+        unknown = any(self._verdict(self._cell(*place, i, focus)) is None for i in asked for place in everywhere)
+        return None if len(asked) < 2 or (unknown and not found[0]) else found
 
     def _feared(self, axis: Axis) -> tuple[float, ...]:
         return feared(axis, self.residuals.get(axis.identity))

@@ -21,6 +21,7 @@ def tipping_frame(
     residuals: Mapping[str, Residuals],
     tippings: Mapping[Line, Tipping],
     threats: Sequence[Threatened],
+    leading: Sequence[int | None],
 ) -> pd.DataFrame:
     """One row an axis, procedure and focal quantity; a second one where a procedure also gives with the departure turned round.
 
@@ -34,6 +35,8 @@ def tipping_frame(
         Where verdicts turn.
     threats : sequence of Threatened
         The side on which the worst severity lies comes first.
+    leading : sequence of int or None
+        The procedure judged most closely, by focal quantity. It has a row even where nothing has been judged.
 
     Notes
     -----
@@ -47,23 +50,18 @@ def tipping_frame(
             for j in range(len(grid.study.focus)):
                 if (i, j) not in grid.job.refusals:
                     first = sides.get((axis.identity, i, j), 1)
-                    rows += _rows(grid, axis, residuals.get(axis.identity), tippings, i, j, first)
+                    found = _told(axis, tippings, i, j, first)
+                    rows += [_row(grid, axis, residuals.get(axis.identity), tipping, i, j) for tipping in found]
+                    if not found and leading[j] == i:
+                        rows.append(_row(grid, axis, residuals.get(axis.identity), None, i, j))
     return pd.DataFrame(rows, columns=list(TIPPING_COLUMNS))
 
 
-def _rows(
-    grid: Grid,
-    axis: Axis,
-    residuals: Residuals | None,
-    tippings: Mapping[Line, Tipping],
-    procedure: int,
-    focus: int,
-    first: int,
-) -> list[dict[str, object]]:
+def _told(axis: Axis, tippings: Mapping[Line, Tipping], procedure: int, focus: int, first: int) -> list[Tipping]:
+    """The tipping severities to tell, the side of the worst severity first."""
     found = {side: tippings.get(Line(axis.identity, procedure, focus, side)) for side in (first, -first)}
     own = {1 if severity > axis.departure.neutral else -1 for severity in axis.departure.ladder}
-    told = [tipping for side, tipping in found.items() if tipping is not None and (side in own or not tipping.never)]
-    return [_row(grid, axis, residuals, tipping, procedure, focus) for tipping in told or [None]]
+    return [tipping for side, tipping in found.items() if tipping is not None and (side in own or not tipping.never)]
 
 
 def _row(

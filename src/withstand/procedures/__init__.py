@@ -13,6 +13,7 @@ from withstand.procedures.cluster import Cr0, Cr1, Cr2
 from withstand.procedures.fitted_weights import FittedWeights, FittedWeightsHc3
 from withstand.procedures.prais_winsten import Gls, PraisWinsten
 from withstand.procedures.m_estimates import Bisquare, Huber
+from withstand.procedures.lad import Lad, LadKernel
 from withstand.procedures.bootstrap import WildBootstrap
 from withstand.procedures.cluster_bootstrap import WildClusterBootstrap
 from withstand.procedures.resampling import PairsBootstrap, ResidualBootstrap
@@ -53,6 +54,8 @@ __all__ = [
     "Hc5",
     "Huber",
     "KnownWeights",
+    "Lad",
+    "LadKernel",
     "LinearProcedure",
     "LogResponse",
     "Ols",

@@ -110,7 +110,7 @@ class Walkers:
         np.divide(times, closing, out=times)
         closing -= least
         total = closing.sum(axis=1)
-        # Off 0 and off the total by more than rounding: an edge on which nothing is gained still has to end at a row that moves.
+        # Off 0 and off the total by more than rounding: an edge on which nothing is gained has to end at a row that moves.
         row = first_to_reach(times, closing, np.clip(0.5 * gain, total * 1e-12, total * (1.0 - 1e-12)))
         return times[np.arange(self.count), row], row
 

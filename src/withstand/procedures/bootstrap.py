@@ -21,6 +21,7 @@ from withstand.procedures.multipliers import (
     kth_largest,
     slabs,
     wald,
+    without_residuals,
 )
 from withstand.procedures.sample import Sample
 from withstand.study.design import Design, Floats
@@ -98,13 +99,14 @@ class WildBootstrap(Procedure):
         covariance = machine.covariance(sample)
         test = partial(self._test, machine, sample, estimate, covariance, allowed)
         if len(estimate) > 1:
-            return IntervalFit(estimate, None, test=test)
+            return IntervalFit(estimate, without_residuals(sample), test=test)
         critical = np.empty(sample.width)
         for part, V in slabs(sample, self.name, partial(self._draw, machine.design.n)):
             statistics = machine.drawn(V, machine.stretch[:, None] * sample.residuals[:, part])
             critical[part] = kth_largest(statistics, allowed)
         claimed = covariance[0, 0]
-        half = np.sqrt(critical * claimed)
+        with np.errstate(invalid="ignore"):
+            half = np.sqrt(critical * claimed)
         failed = ~np.isfinite(half)
         half = np.where(failed, 0.0, half)
         return IntervalFit(estimate, failed if failed.any() else None, estimate[0] - half, estimate[0] + half, claimed, test)

@@ -21,8 +21,10 @@ from withstand.procedures.multipliers import (
     check_draws,
     check_multipliers,
     exceeded,
+    ratio,
     slabs,
     wald,
+    without_residuals,
 )
 from withstand.procedures.sample import Sample
 from withstand.study.design import Design, Floats
@@ -98,7 +100,8 @@ def _fit(machine: _Machine, sample: Sample, allowed: int, draw: Draw) -> Fit:
     estimate = machine.basis @ sample.projections
     covariance = machine.form.evaluate(sample)
     if len(estimate) > 1:
-        return IntervalFit(estimate, None, test=partial(_joint_test, machine, sample, estimate, covariance, allowed, draw))
+        test_of_all = partial(_joint_test, machine, sample, estimate, covariance, allowed, draw)
+        return IntervalFit(estimate, without_residuals(sample), test=test_of_all)
     claimed = covariance[0, 0]
     curves = [
         (part, _Curve.of(machine, V, sample.residuals[:, part], claimed[part], allowed))
@@ -108,7 +111,7 @@ def _fit(machine: _Machine, sample: Sample, allowed: int, draw: Draw) -> Fit:
     for part, curve in curves:
         start = 3.0 * np.sqrt(claimed[part])
         reach[0, part], reach[1, part] = curve.furthest_accepted(start), curve.furthest_accepted(-start)
-    failed: Flags = np.asarray(~np.isfinite(reach).all(axis=0))
+    failed: Flags = ~np.isfinite(reach).all(axis=0) | (claimed <= 0.0)
     reach[:, failed] = 0.0
 
     def test(value: Floats) -> Flags:
@@ -186,7 +189,11 @@ class _Machine:
             g = (crossed.transpose(2, 1, 0).reshape(-1, G) @ V.T).reshape(p, r, draws)
             inner = self.means[i].T @ self.means[j]
             curved = (inner @ c.reshape(p, -1)).reshape(p, r, draws)
-            pairs.append((score[i] * score[j]).T @ squares + np.einsum("prj,prj->rj", c, curved - g))
+            first = (score[i] * score[j]).T @ squares
+            form = first + np.einsum("prj,prj->rj", c, curved - g)
+            # Left-over rounding must not pass for a variance: with equal weights the restricted part of u is fitted away.
+            form[np.abs(form) <= 1e-12 * np.abs(first)] = 0.0
+            pairs.append(form)
         return (self.basis @ c.reshape(p, -1)).reshape(-1, r, draws), self.scale * np.stack(pairs)
 
 
@@ -208,7 +215,7 @@ class _Curve:
     @classmethod
     def of(cls, machine: _Machine, V: Floats, residuals: Floats, claimed: Floats, allowed: int) -> _Curve:
         """The curves of r replicates, residuals (n, r)."""
-        step = np.sqrt(claimed)
+        step = np.sqrt(np.where(claimed > 0.0, claimed, 1.0))
         n0, q0 = (part[0] for part in machine.parts(V, residuals))
         n1, q2 = (part[0] for part in machine.parts(V, machine.back))
         _, moved = (part[0] for part in machine.parts(V, residuals + machine.back * step))
@@ -219,7 +226,7 @@ class _Curve:
         """Whether the test rejects the value at each distance (r,)."""
         d = distance[:, None]
         numerator, variance = self.n0 + d * self.n1, self.q0 + d * (self.q1 + d * self.q2)
-        return exceeded(wald(numerator[None], variance[None, None]), distance**2 / self.claimed, self.allowed)
+        return exceeded(wald(numerator[None], variance[None, None]), ratio(distance**2, self.claimed), self.allowed)
 
     def furthest_accepted(self, start: Floats) -> Floats:
         """From 0 in the direction of `start` (r,): the distance at which the test begins to reject; inf if it never does."""

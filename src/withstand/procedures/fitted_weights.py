@@ -9,14 +9,15 @@ from itertools import pairwise
 import numpy as np
 from scipy.linalg import qr
 
-from withstand.departures.along import FITTED, column_along
+from withstand.departures.along import FITTED, column_along, value_at
+from withstand.errors import ScenarioError
 from withstand.procedures.base import Fitter, Procedure, register
 from withstand.procedures.critical import student_critical
 from withstand.procedures.fit import Fit, Flags, WaldFit
 from withstand.procedures.normal import Products, quadratic, solve
 from withstand.procedures.sample import Sample
 from withstand.study.design import Design, Floats
-from withstand.study.focus import Focus, FocusKind, Point
+from withstand.study.focus import Focus, FocusKind
 
 MODEL = "model"
 """Stands for all columns of the model matrix."""
@@ -93,6 +94,9 @@ class FittedWeights(Procedure):
             )
         if self._variance_columns(design)[0].shape[1] == 0:
             return f"not applicable, because '{self.along}' is the same in every row"
+        known = focus.point is not None and (self.along == FITTED or self.along in focus.point.columns)
+        if focus.kind is FocusKind.NEW and self.along != MODEL and not known:
+            return f"not applicable, because the point of the focus gives no value for '{self.along}'"
         return None
 
     def prepare(self, design: Design, foci: Sequence[Focus], level: float) -> Fitter:
@@ -124,7 +128,13 @@ class FittedWeights(Procedure):
 
     def _variables(self, design: Design) -> Floats:
         """Z, (n, m), in its own units."""
-        return design.X if self.along == MODEL else column_along(design, self.along, self.name)[:, None]
+        if self.along == MODEL:
+            return design.X
+        try:
+            return column_along(design, self.along, self.name)[:, None]
+        except ScenarioError as refusal:
+            where = f"procedures.use: {self.name}.along"
+            raise ScenarioError(refusal.what, where=where, remedy=refusal.remedy) from refusal
 
     def _variance_columns(self, design: Design) -> tuple[Floats, Floats]:
         """Orthonormal basis (n, q) of the centred columns of Z, and the matrix (m, q) that takes a centred row there."""
@@ -148,9 +158,9 @@ class FittedWeights(Procedure):
         means = self._variables(design).mean(axis=0)
         if self.along == MODEL:
             return np.asarray(focus.L[0] - means)
-        point = focus.point or Point()
-        value = point.fitted if self.along == FITTED else point.columns.get(self.along, float(means[0]))
-        return np.asarray([value]) - means
+        if focus.point is None:
+            raise TypeError("a new response needs a point; not_applicable says so first")
+        return np.asarray([value_at(focus.point, self.along, self.name)]) - means
 
 
 @register
@@ -203,7 +213,7 @@ def weighted_block(sample: Sample, products: Products, Z: Floats, bases: list[Fl
         The fits.
     """
     squares = sample.squared_residuals
-    lost = np.any(squares <= _NO_RESIDUAL * (sample.residual_sum / sample.design.n), axis=0)
+    lost = squares.min(axis=0) <= _NO_RESIDUAL * (sample.residual_sum / sample.design.n)
     logs = np.log(squares[:, ~lost]) if lost.any() else np.log(squares)
     gamma = np.zeros((Z.shape[1], sample.width))
     gamma[:, ~lost] = Z.T @ logs

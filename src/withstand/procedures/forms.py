@@ -138,8 +138,10 @@ class Banded(ResidualForm):
             for j in range(i, k):
                 total = np.einsum("tb,tb->b", scores[i], scores[j])
                 for lag, weight in enumerate(self.lag_weights[1:], start=1):
-                    total += weight * np.einsum("tb,tb->b", scores[i][lag:], scores[j][: n - lag])
-                    total += weight * np.einsum("tb,tb->b", scores[j][lag:], scores[i][: n - lag])
+                    ahead = np.einsum("tb,tb->b", scores[i][lag:], scores[j][: n - lag])
+                    if i != j:
+                        total += weight * np.einsum("tb,tb->b", scores[j][lag:], scores[i][: n - lag])
+                    total += (weight if i != j else 2.0 * weight) * ahead
                 result[i, j] = result[j, i] = self.scale * total
         return result
 

@@ -15,11 +15,14 @@ from withstand.procedures.critical import student_critical
 from withstand.procedures.fit import Fit, Flags, WaldFit
 from withstand.procedures.normal import Products, solve
 from withstand.procedures.sample import Sample
-from withstand.study.design import Design, Floats, Ints
+from withstand.study.design import Design, Floats
 from withstand.study.focus import Focus, FocusKind
 
 _NORMAL_QUARTILES = 1.34
 """Distance of the quartiles of a standard normal variable, rounded as it is used."""
+
+_COLLAPSED = 1e-9
+"""A bandwidth below this share of the root mean square residual is rounding: half of the rows are fitted exactly."""
 
 
 def hall_sheather(n: int, level: float) -> float:
@@ -79,7 +82,7 @@ class MedianRegression(Procedure):
             e -= step.T @ design.Q.T
             e[np.arange(len(e))[None, :], basis] = 0.0
             h = bandwidths(e, level)
-            failed |= ~(h > 0.0)
+            failed |= ~(h > _COLLAPSED * np.sqrt(np.einsum("bt,bt->b", e, e) / design.n))
             e /= np.where(failed, 1.0, h)[:, None]
             covariances, void = self.covariances(products, bases, kernel(e), np.where(failed, 1.0, h))
             failed |= void

@@ -14,8 +14,9 @@ from withstand.procedures.sample import Sample
 from withstand.study.design import Floats, Ints
 
 SLAB = 50
-"""Replicates that share one set of draws. Sharing turns the bootstrap into matrix products; sharing among few keeps the
-replicates of a block independent to within about 50 times the correlation of two bootstrap p-values given the draws."""
+"""Replicates that share one set of draws. Sharing turns the bootstrap into matrix products. It also ties replicates together,
+which Monte Carlo errors take to be independent: with 50, rejection rates of blocks of 500 varied as binomial ones do to within
+12 % of the variance (10 and 30 rows, normal and exponential errors), 16 % with 6 clusters."""
 
 DRAWS = 399
 """Default number of draws B*; (B* + 1) times 0.05, 0.025 and 0.01 are whole numbers."""
@@ -103,6 +104,19 @@ def check_multipliers(law: str, name: str) -> None:
         )
 
 
+def ratio(squares: Floats, over: Floats) -> Floats:
+    """A statistic, infinite where the variance below is 0."""
+    with np.errstate(divide="ignore", invalid="ignore"):
+        values = squares / over
+    return np.asarray(np.where(np.isnan(values), np.inf, values))
+
+
+def without_residuals(sample: Sample) -> Flags | None:
+    """Replicates that the model fits without residuals: there is nothing to draw from. None where there are none."""
+    found: Flags = np.asarray(sample.residual_sum <= 0.0)
+    return found if found.any() else None
+
+
 def wald(distance: Floats, covariance: Floats) -> Floats:
     """Quadratic form d' V^-1 d, with no division by k.
 
@@ -124,9 +138,7 @@ def wald(distance: Floats, covariance: Floats) -> Floats:
     """
     k = len(distance)
     if k == 1:
-        with np.errstate(divide="ignore", invalid="ignore"):
-            ratio = distance[0] ** 2 / covariance[0, 0]
-        return np.asarray(np.where(np.isnan(ratio), np.inf, ratio))
+        return ratio(distance[0] ** 2, covariance[0, 0])
     factor = np.zeros_like(covariance)
     total = np.zeros(distance.shape[1:])
     solved: list[Floats] = []

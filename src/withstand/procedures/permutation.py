@@ -9,7 +9,7 @@ import numpy as np
 
 from withstand.procedures.base import Answer, Fitter, Procedure, register
 from withstand.procedures.fit import Fit, Flags, IntervalFit
-from withstand.procedures.multipliers import DRAWS, allowed_exceedances, check_draws, exceeded, slabs
+from withstand.procedures.multipliers import DRAWS, allowed_exceedances, check_draws, exceeded, ratio, slabs, without_residuals
 from withstand.procedures.sample import Sample
 from withstand.study.design import Design, Floats, Ints
 from withstand.study.focus import Focus, FocusKind
@@ -42,6 +42,11 @@ class Permutation(Procedure):
         """See Procedure."""
         if focus.kind is FocusKind.NEW:
             return "not applicable, because permuting tests a hypothesis, and a new response has none"
+        ones = np.ones(design.n)
+        intercept = np.linalg.norm(ones - design.Q @ (design.Q.T @ ones)) <= 1e-8 * np.sqrt(design.n)
+        level = np.abs(design.estimator(focus.L) @ ones) > 1e-8 * np.abs(design.estimator(focus.L)) @ ones
+        if intercept and level.any():
+            return "not applicable, because permuted residuals keep their mean, and the quantity contains the level"
         return None
 
     def answers(self, focus: Focus) -> frozenset[Answer]:
@@ -65,7 +70,7 @@ class Permutation(Procedure):
                 def test(value: Floats, machine: _Machine = machine, estimate: Floats = estimate) -> Flags:
                     return machine.rejects(sample, estimate - value.reshape(len(estimate), -1), allowed, draw)
 
-                fits.append(IntervalFit(estimate, None, test=test))
+                fits.append(IntervalFit(estimate, without_residuals(sample), test=test))
             return fits
 
         return fit
@@ -102,7 +107,7 @@ class _Machine:
         """Whether the test rejects the value at `distance` (k, B) from the estimate."""
         k, n, p = len(self.basis), self.design.n, self.design.p
         moved = self.back @ distance
-        observed = np.einsum("nb,nb->b", moved, moved) / sample.residual_sum
+        observed = ratio(np.einsum("nb,nb->b", moved, moved), sample.residual_sum)
         restricted = sample.residuals + moved
         loads = self.design.Q @ self.directions
         rejected = np.empty(sample.width, dtype=bool)
@@ -117,7 +122,5 @@ class _Machine:
             total = np.einsum("nr,nr->r", u, u)[:, None]
             left = total - squares.sum(axis=1)
             left[left <= 1e-12 * total] = 0.0
-            with np.errstate(divide="ignore", invalid="ignore"):
-                ratio = focal / left
-            rejected[part] = exceeded(np.where(np.isnan(ratio), np.inf, ratio), observed[part], allowed)
+            rejected[part] = exceeded(ratio(focal, left), observed[part], allowed)
         return rejected

@@ -119,6 +119,12 @@ class Gls(Procedure):
             raise ScenarioError(
                 f"rho is {self.rho:g}", where="procedures.use: gls.rho", remedy="Give a number between -1 and 1, both excluded."
             )
+        if self.step is not None and not 0.0 < self.step < np.inf:
+            raise ScenarioError(
+                f"step is {self.step:g}",
+                where="procedures.use: gls.step",
+                remedy="Give a positive length in the unit of the order column, or leave it out.",
+            )
         _check_within(self.name, self.within)
 
     def _serial(self) -> Serial:

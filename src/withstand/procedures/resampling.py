@@ -17,8 +17,10 @@ from withstand.procedures.multipliers import (
     check_draws,
     exceeded,
     indicator_sums,
+    ratio,
     slabs,
     wald,
+    without_residuals,
 )
 from withstand.procedures.sample import Sample
 from withstand.procedures.sandwich import Hc1
@@ -124,7 +126,7 @@ class PairsBootstrap(PercentileT):
                     fits.append(_interval(estimate, covariance[0, 0], end[0], end[1]))
                 else:
                     region = partial(self._rejects, design, basis, sample, estimate, covariance, allowed)
-                    fits.append(IntervalFit(estimate, None, test=region))
+                    fits.append(IntervalFit(estimate, without_residuals(sample), test=region))
             return fits
 
         return fit
@@ -253,8 +255,7 @@ class ResidualBootstrap(PercentileT):
                     moved = np.einsum("kp,prj->krj", basis, c)
                     if len(basis) > 1:
                         shape = np.linalg.inv(basis @ basis.T)
-                        with np.errstate(divide="ignore", invalid="ignore"):
-                            forms[i].append(np.einsum("irj,ik,krj->rj", moved, shape, moved, optimize=True) / variance)
+                        forms[i].append(ratio(np.einsum("irj,ik,krj->rj", moved, shape, moved, optimize=True), variance))
                         continue
                     if focus.kind is FocusKind.NEW:
                         # y_new - estimate in the drawn world: one more drawn error, less the error of the estimate.
@@ -269,7 +270,7 @@ class ResidualBootstrap(PercentileT):
                     fits.append(_interval(estimate, size * s2, end[0], end[1]))
                 else:
                     region = partial(_classical_region, basis @ basis.T, np.concatenate(form), estimate, s2, allowed)
-                    fits.append(IntervalFit(estimate, None, test=region))
+                    fits.append(IntervalFit(estimate, without_residuals(sample), test=region))
             return fits
 
         return fit
@@ -277,7 +278,7 @@ class ResidualBootstrap(PercentileT):
 
 def _classical_region(gram: Floats, drawn: Floats, estimate: Floats, s2: Floats, allowed: int, value: Floats) -> Flags:
     distance = estimate - value.reshape(len(estimate), -1)
-    observed = np.einsum("ib,ib->b", distance, np.linalg.solve(gram, distance)) / s2
+    observed = ratio(np.einsum("ib,ib->b", distance, np.linalg.solve(gram, distance)), s2)
     return exceeded(drawn, observed, allowed)
 
 

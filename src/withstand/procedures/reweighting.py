@@ -25,6 +25,9 @@ _SETTLED_NEWTON = 1e-7
 _NEAR = 0.4
 """Newton's method takes over when a reweighting step is below this many scales."""
 
+_LEAP = 10.0
+"""A reweighting step that covers 1 - q of the way leaves q / (1 - q) of itself to the Newton step after it: q is up to 0.9."""
+
 _STEEP = 0.1
 """Smallest denominator of the rank-one update that is trusted."""
 
@@ -74,8 +77,10 @@ class Reweighting:
     -----
     Both steps seek sum psi(r / s) q = 0 with s = median |r| / 0.6745. The reweighting step solves Q'WQ d = Q'W r. Newton's
     step replaces W by psi' and lets the scale follow the residuals of the middle rows m: (N - h g') d = Q'W r, N = Q'psi'Q,
-    with h = sum psi' r q / s and g = mean of sign(r_m) q_m / 0.6745. Where a Newton step fails to halve the step before it,
-    reweighting goes on until the fit is ten times nearer.
+    with h = sum psi' r q / s and g = mean of sign(r_m) q_m / 0.6745. A Newton step that does not halve the Newton step
+    before it, or is out of proportion to the reweighting step before it, is not taken, and reweighting goes on until the fit is
+    ten times nearer. Replicates that come to nothing start again without
+    Newton's method, so that a failure is one of reweighting.
     """
 
     score: Score
@@ -83,7 +88,7 @@ class Reweighting:
     first: Floats
 
     def run(self) -> tuple[Floats, Flags]:
-        """Iterate; replicates that have settled leave.
+        """Iterate.
 
         Returns
         -------
@@ -92,31 +97,39 @@ class Reweighting:
         failed : ndarray of bool, shape (B,)
             No convergence, no solution, or a scale that has collapsed.
         """
+        step, failed = self._iterate(_NEAR)
+        again = np.flatnonzero(failed)
+        if again.size:
+            step[again], failed[again] = Reweighting(self.score, self.products, self.first[again])._iterate(0.0)
+        return step, failed
+
+    def _iterate(self, nearness: float) -> tuple[Floats, Flags]:
+        """One run, with Newton's method for steps below `nearness`; replicates that have settled leave."""
         B, p = self.first.shape[0], self.products.Q.shape[1]
         step, failed = np.zeros((B, p)), np.zeros(B, dtype=bool)
         least = _COLLAPSED * mad(np.abs(self.first))
         going, residuals = np.arange(B), self.first.copy()
-        near, size = np.full(B, _NEAR), np.full(B, np.inf)
+        near, bound = np.full(B, nearness), np.full(B, np.inf)
+        size = bound
         for _ in range(_ROUNDS):
             newton = size < near
             change, scale, lost, astray = self._change(residuals, newton, least[going])
             move = np.abs(change).max(axis=1) / scale
             small = np.where(newton, _SETTLED_NEWTON, _SETTLED)
-            astray |= newton & (move > 0.5 * size) & (move > small)
+            astray |= newton & (move > bound) & (move > small)
             near[astray] *= 0.1
-            # A step that went astray is still taken: reweighting mends it from wherever it led, if it led not too far.
-            change[newton & (move > _NEAR)] = 0.0
+            change[astray] = 0.0
             move[astray] = np.inf
             step[going] += change
             failed[going[lost]] = True
             left = np.flatnonzero((move > small) & ~lost)
             if left.size < going.size:
                 going, residuals, change = going[left], residuals[left], change[left]
-                near, move = near[left], move[left]
+                near, move, newton = near[left], move[left], newton[left]
             if going.size == 0:
                 break
             residuals -= change @ self.products.Q.T
-            size = move
+            size, bound = move, np.where(newton, 0.5, _LEAP) * move
         failed[going] = True
         step[failed] = 0.0
         return step, failed

@@ -14,6 +14,9 @@ from withstand.report.view import View
 LABEL_GAP = 0.062
 """Least distance of two labels, as a share of the height of the panel."""
 
+_LEFT = 0.65
+"""Points up to here have their names on the right, where there is room; the others on the left."""
+
 
 def harm_points(view: View, focus: str) -> list[tuple[str, float, float, str]]:
     """Name, detectability where the interval starts to give, coverage lost in points, and verdict; by departure.
@@ -68,7 +71,7 @@ def draw_harm(view: View, focus: str) -> Figure:
 def _label(panel: Axes, points: list[tuple[str, float, float, str]], low: float, high: float) -> None:
     """Names beside their points, pushed apart where they would overlap, with a line to the point."""
     for left in (True, False):
-        side = sorted((point for point in points if (point[1] <= 0.5) is left), key=lambda point: point[2])
+        side = sorted((point for point in points if (point[1] <= _LEFT) is left), key=lambda point: point[2])
         heights = _apart([(harm - low) / (high - low) for _, _, harm, _ in side])
         for (name, seen, harm, _), height in zip(side, heights, strict=True):
             away = 4.0 if left else -4.0

@@ -92,6 +92,11 @@ class View:
         named = [str(focus["name"]) for focus in self.outcome.facts.get("focus", [])]
         return unique([*named, *map(str, self.outcome.measures["focus"])])
 
+    def planned_procedures(self, focus: str) -> list[str]:
+        """Every procedure that was to be judged for a focal quantity, whether it has been or not."""
+        refused = {procedure for procedure, refused_focus, _ in self.outcome.refusals if refused_focus == focus}
+        return [name for name in self.outcome.provenance.get("procedures", self.procedures) if name not in refused]
+
     @property
     def reference(self) -> str:
         """The procedure that premium and protection are counted against: ols, or the first named."""
@@ -133,6 +138,9 @@ class View:
         Those below neutral are the departure turned round.
         """
         found: dict[Axis, dict[float, str]] = {}
+        for told in self.outcome.facts.get("axes", []):
+            rungs = {float(severity): str(label) for severity, label in told["ladder"]}
+            found[Axis(told["departure"], told["along"], told["stack"])] = rungs
         for row in self._of_this_size(self.outcome.measures):
             if row.departure != NOTHING:
                 found.setdefault(_axis(row), {})[float(row.severity)] = str(row.severity_label)

@@ -138,7 +138,7 @@ class SeverityWords:
         if not rounded:
             return _figure(severity, self.inverse)
         if self.inverse:
-            return "∞" if severity <= 0.0 else number(1.0 / severity, 2)
+            return "∞" if severity <= 0.0 else number(1.0 / severity, 3)
         return number(severity, 2)
 
     def span(self, low: float, high: float) -> str:

@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 from withstand.report.view import Axis, Reading, View
-from withstand.report.words import SeverityWords, percent, share, short_share, times
+from withstand.report.words import SeverityWords, number, percent, share, short_share, times
 
 CLOSE = 0.02
 """Two ends of a bracket that differ by less, relative to the larger, are one severity to a reader."""
@@ -65,8 +66,8 @@ def worries(view: View, procedure: str, focus: str) -> list[Worry]:
                 turning(view, axis, procedure, focus),
                 allowed(view, axis, procedure, focus) or "not known",
                 _covers(view, axis, procedure, focus, words),
-                _rows(row),
-                _instead(view, row, focus),
+                _rows(row, view.bounds or ()),
+                _instead(view, axis, row, focus),
                 "" if math.isnan(seen) else f"{percent(seen, decimals=0)} %",
             )
         )
@@ -117,7 +118,8 @@ def allowed(view: View, axis: Axis, procedure: str, focus: str) -> str:
         return "any that was tried"
     if math.isinf(low):
         return f"{words.label(high)} or less"
-    return f"{words.label(low)} or more" if math.isinf(high) else words.span(low, high)
+    # A label with the reciprocal, such as degrees of freedom, falls as the severity rises.
+    return f"{words.label(low)} or {'fewer' if words.inverse else 'more'}" if math.isinf(high) else words.span(low, high)
 
 
 def _verdict(view: View, axis: Axis, procedure: str, focus: str) -> str:
@@ -136,7 +138,11 @@ def _covers(view: View, axis: Axis, procedure: str, focus: str, words: SeverityW
     where = "with nothing wrong" if severity == view.neutral(axis) else f"at {label}"
     reading = _reading(view, axis, severity, procedure, focus, "coverage")
     if reading is not None:
-        return f"{short_share(reading, bounds)} % {where}{' (exact)' if reading.exact else ''}"
+        judged = view.verdict(axis, severity, procedure, focus)
+        besides = ""
+        if judged is not None and judged[0] != "holds" and judged[1] not in ("coverage", "size"):
+            besides = f"; {judged[1].replace('_', ' ')} {number(judged[2], 2)}"
+        return f"{short_share(reading, bounds)} % {where}{' (exact)' if reading.exact else ''}{besides}"
     if row is None or math.isnan(row.coverage_there):
         size = _reading(view, axis, severity, procedure, focus, "size")
         return "no interval" if size is None else f"size {share(size)} {where}"
@@ -149,19 +155,21 @@ def _reading(view: View, axis: Axis, severity: float, procedure: str, focus: str
     return view.reading(axis, severity, procedure, focus, measure)
 
 
-def _rows(row: object) -> str:
+def _rows(row: object, bounds: Sequence[float]) -> str:
     cure = getattr(row, "cure", None)
     told = cure if isinstance(cure, str) else ""
     limit = float(getattr(row, "limit", math.nan))
-    return f"{told} (covers {percent(limit)} % in the limit)" if told and math.isfinite(limit) else told
+    return f"{told} (covers {percent(limit, bounds)} % in the limit)" if told and math.isfinite(limit) else told
 
 
-def _instead(view: View, row: object, focus: str) -> str:
+def _instead(view: View, axis: Axis, row: object, focus: str) -> str:
     holding = getattr(row, "holding_procedure", None)
+    there = axis, float(getattr(row, "worst_severity", math.nan))
     if row is None or getattr(row, "verdict_there", "") == "holds":
         return ""
     if not isinstance(holding, str) or not holding:
-        return "none of the procedures tried holds there"
+        unjudged = [name for name in view.planned_procedures(focus) if view.verdict(*there, name, focus) is None]
+        return f"none of the procedures {'judged so far' if unjudged else 'tried'} holds there"
     if holding == getattr(row, "procedure", ""):
         return ""
     ratio = width_ratio(view, holding, focus)

@@ -38,12 +38,15 @@ class Loaded:
         What to try.
     record : mapping
         The scenario with all overrides and an absolute path to the data, to be run again from anywhere.
+    left_out : tuple of str
+        Those notices of the study that say which departures the defaults left out.
     """
 
     name: str
     study: Study
     plan: Plan
     record: Mapping[str, Any]
+    left_out: tuple[str, ...] = ()
 
 
 def load_scenario(path: Path, overrides: Mapping[str, Mapping[str, Any]] | None = None) -> Loaded:
@@ -99,7 +102,7 @@ def load(
     except InputError as error:
         raise source.relocate(error) from error
     study = replace(study, notices=(*study.notices, *notices))
-    return Loaded(name, study, plan, _record(values, source, study.name))
+    return Loaded(name, study, plan, _record(values, source, study.name), notices)
 
 
 def _overridden(raw: Mapping[str, Any], overrides: Mapping[str, Mapping[str, Any]]) -> dict[str, Any]:

@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING, Annotated, Any, Literal, Self
+from typing import TYPE_CHECKING, Annotated, Any, ClassVar, Literal, Self
 
 from pydantic import Discriminator, Field, Tag, model_validator
 
 from withstand.departures import REGISTRY as DEPARTURES
+from withstand.diagnostics import Pretest
+from withstand.diagnostics.base import REGISTRY as DIAGNOSTICS
 from withstand.procedures.base import REGISTRY as PROCEDURES
 from withstand.scenario.options import Part, option_model, tagged_union
 from withstand.scenario.planned import PlanPart
@@ -31,8 +33,26 @@ class ProcedurePart(Part):
     name: str
 
 
+class PretestPart(Part):
+    """A rule: a diagnostic decides between two procedures."""
+
+    name: ClassVar[str] = Pretest.name
+
+    if_: str = Field(alias="if", description=f"The diagnostic that decides. Known: {', '.join(DIAGNOSTICS)}.")
+    then: str = Field(description="The procedure where the diagnostic fails.")
+    otherwise: str = Field(alias="else", description="The procedure where it passes.")
+    alpha: float = Field(default=Pretest.alpha, description="Size of the diagnostic.")
+    branch: Literal["both", "passed", "failed"] = Field(
+        default="both", description="Judge the rule, or only the replicates in which the diagnostic passed (or failed)."
+    )
+
+
 def _written_as(value: Any) -> str:
     return "table" if isinstance(value, dict) else "text"
+
+
+def _procedure_written_as(value: Any) -> str:
+    return "rule" if isinstance(value, dict) and "if" in value else _written_as(value)
 
 
 def _companion_models() -> list[type[Part]]:
@@ -55,9 +75,8 @@ def _departure_models() -> list[type[Part]]:
 
 
 def _procedure_models() -> list[type[Part]]:
-    return [
-        option_model(ProcedurePart, f"{cls.__name__}Choice", "name", name, cls) for name, cls in PROCEDURES.items()
-    ]
+    named = {name: cls for name, cls in PROCEDURES.items() if cls is not Pretest}
+    return [option_model(ProcedurePart, f"{cls.__name__}Choice", "name", name, cls) for name, cls in named.items()]
 
 
 if TYPE_CHECKING:
@@ -115,8 +134,11 @@ class ProceduresPart(Part):
     """The procedures to judge; the first is the user's own."""
 
     use: list[
-        Annotated[Annotated[str, Tag("text")] | Annotated[ProcedureEntry, Tag("table")], Discriminator(_written_as)]
-    ] = Field(min_length=1, description=f"Names, or tables of a name and options. Known: {', '.join(PROCEDURES)}.")
+        Annotated[
+            Annotated[str, Tag("text")] | Annotated[ProcedureEntry, Tag("table")] | Annotated[PretestPart, Tag("rule")],
+            Discriminator(_procedure_written_as),
+        ]
+    ] = Field(min_length=1, description=f"Names, tables of a name and options, or rules. Known: {', '.join(PROCEDURES)}.")
 
 
 class TolerancePart(Part):

@@ -8,7 +8,6 @@ from __future__ import annotations
 from abc import ABC, abstractmethod
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
-from types import MappingProxyType
 
 import numpy as np
 from scipy import stats
@@ -193,7 +192,7 @@ class Drawn(PlannedColumn):
     sd: float | None = None
     low: float | None = None
     high: float | None = None
-    correlated: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
+    correlated: Mapping[str, float] = field(default_factory=dict)
 
     @property
     def random(self) -> bool:

@@ -64,6 +64,7 @@ class Growth(ABC):
             rows=FixedRows(design),
             response=None,
             account=None,
+            labels=(),
             digest=f"{self.study.digest}|{self.rule}|{n}",
         )
 
@@ -108,7 +109,7 @@ class Stack(Growth):
         fitted = design.X @ self.study.coefficients
         if design.groups is not None:
             means = np.bincount(design.groups, weights=fitted) / np.bincount(design.groups)
-            whole = _evenly(np.argsort(means, kind="stable"), design.group_count)
+            whole = _spread_out(np.argsort(means, kind="stable"))
             rows = np.concatenate([np.flatnonzero(design.groups == group) for group in whole])
             return np.asarray(rows[:rest])
         cells = [factor.codes for factor in design.factors.values()]
@@ -249,7 +250,7 @@ def growth_of(study: Study, rule: str | None = None) -> Growth:
     Raises
     ------
     ScenarioError
-        If the rule is unknown, or given for a plan.
+        If the rule is unknown, given for a plan, or does not suit the study.
     """
     if study.grow is not None:
         if rule is not None:
@@ -259,14 +260,32 @@ def growth_of(study: Study, rule: str | None = None) -> Growth:
                 remedy="Leave it out: a plan lays out as many rows as it is asked for.",
             )
         return Planned(study)
+    asked = rule is not None
     if rule is None:
         series = study.design.order is not None and study.design.groups is None
         rule = Extend.rule if series else Stack.rule if study.rows.fixed else Resample.rule
     if rule not in RULES:
         raise ScenarioError(f"unknown growth '{rule}'", where="growth", remedy=nearest(rule, RULES))
-    return RULES[rule](study)
+    growth = RULES[rule](study)
+    if asked:
+        # Refused here, before anything is computed, if it does not suit the study.
+        growth.at(study.n + 1)
+    return growth
 
 
 def _evenly(ranked: Ints, count: int) -> Ints:
     """`count` members of a ranking, evenly spaced, the middle ones first."""
     return np.asarray(ranked[np.floor((np.arange(count) + 0.5) * len(ranked) / max(count, 1)).astype(np.int64)])
+
+
+def _spread_out(ranked: Ints) -> Ints:
+    """A ranking in an order of which every beginning is spread over all of it (van der Corput 1935, base 2)."""
+    places = np.arange(1, len(ranked) + 1)
+    fractions, digit = np.zeros(len(ranked)), 0.5
+    while places.any():
+        fractions += digit * (places % 2)
+        places, digit = places // 2, digit / 2.0
+    # The fractions point at ranks; each rank is taken by the first that comes nearest.
+    order = np.empty(len(ranked), dtype=np.int64)
+    order[np.argsort(fractions, kind="stable")] = ranked
+    return order

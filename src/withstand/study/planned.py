@@ -7,7 +7,6 @@ import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from functools import cached_property
-from types import MappingProxyType
 from typing import Literal
 
 from withstand.errors import ScenarioError
@@ -49,7 +48,7 @@ class StudyPlan:
 
     rows: int
     columns: Mapping[str, PlannedColumn]
-    coefficients: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
+    coefficients: Mapping[str, float] = field(default_factory=dict)
     error_sd: float | None = None
     r_squared: float | None = None
     pilot: Pilot | None = None

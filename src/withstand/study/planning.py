@@ -169,6 +169,18 @@ class PlannedRows:
         """A table that carries the model; one that does not is drawn again."""
         return full_rank_draw(lambda: self.once(generator))
 
+    def draw_all(self, generators: Sequence[np.random.Generator]) -> list[Design]:
+        """What `draw` gives for each generator, evaluating the formula on all the tables at once."""
+        frames = [self.planner.frame(self.n, generator) for generator in generators]
+        X = np.split(matrix_of(self.model, pd.concat(frames, ignore_index=True)), np.cumsum([len(f) for f in frames])[:-1])
+        designs = []
+        for frame, part, generator in zip(frames, X, generators, strict=True):
+            try:
+                designs.append(self._design(frame, np.ascontiguousarray(part)))
+            except DesignError:
+                designs.append(self.draw(generator))
+        return designs
+
     def once(self, generator: np.random.Generator) -> Design:
         """A table.
 
@@ -178,7 +190,9 @@ class PlannedRows:
             If it does not carry the model.
         """
         frame = self.planner.frame(self.n, generator)
-        X = matrix_of(self.model, frame)
+        return self._design(frame, matrix_of(self.model, frame))
+
+    def _design(self, frame: pd.DataFrame, X: Floats) -> Design:
         numeric = [name for name in frame.columns if not isinstance(frame[name].dtype, pd.CategoricalDtype)]
         roles = self.planner.roles
         order, weights = (frame[roles[role]].to_numpy(dtype=float) if role in roles else None for role in ("order", "weights"))

@@ -68,6 +68,12 @@ def planned_study(
     pilot = plan.pilot
     known = list(dict.fromkeys([*plan.columns, *([] if pilot is None else map(str, pilot.frame.columns))]))
     parsed = parse_formula(formula, known, planned=True)
+    if parsed.response in plan.columns:
+        raise ScenarioError(
+            f"the response '{parsed.response}' is a column of the plan",
+            where="study.model",
+            remedy="The plan describes the predictors; the response is what the study will measure.",
+        )
     plan = replace(plan, columns=_columns(plan, parsed, roles, known))
     _check_roles(plan, roles)
     entries = (focus,) if isinstance(focus, str | Mapping) else tuple(focus)
