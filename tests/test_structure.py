@@ -32,7 +32,9 @@ def module_files() -> list[Path]:
 
 
 def test_every_room_is_named():
-    rooms = {room(path) for path in ROOT.rglob("*.py") if path.name not in {"__init__.py", "__main__.py"} or path.parent != ROOT}
+    rooms = {
+        room(path) for path in ROOT.rglob("*.py") if path.name not in {"__init__.py", "__main__.py"} or path.parent != ROOT
+    }
     assert rooms - {"__init__", "__main__"} <= set(ORDER)
 
 
@@ -41,13 +43,18 @@ def test_imports_point_backwards_only():
         f"{path.relative_to(ROOT)} imports {name}"
         for path in module_files()
         for name in imports(path)
-        if len(name.split(".")) > 1 and name.split(".")[1] in ORDER and ORDER.index(name.split(".")[1]) > ORDER.index(room(path))
+        if len(name.split(".")) > 1
+        and name.split(".")[1] in ORDER
+        and ORDER.index(name.split(".")[1]) > ORDER.index(room(path))
     ]
     assert wrong == []
 
 
 def test_no_module_cycles():
-    files = {".".join(("withstand", *path.relative_to(ROOT).with_suffix("").parts)).removesuffix(".__init__"): path for path in module_files()}
+    files = {
+        ".".join(("withstand", *path.relative_to(ROOT).with_suffix("").parts)).removesuffix(".__init__"): path
+        for path in module_files()
+    }
     graph = {}
     for name, path in files.items():
         targets = set()

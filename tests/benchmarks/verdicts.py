@@ -9,12 +9,14 @@ simulation alone, looking after 10,000, 20,000, ... replicates, and the verdicts
 
 from __future__ import annotations
 
-import argparse
-import json
 import sys
 import time
+from pathlib import Path
 
 import numpy as np
+
+sys.path.insert(0, str(Path(__file__).parent))
+from bars import Bars, options
 
 from withstand.departures.dependence import Clusters, Serial
 from withstand.departures.level_spread import LevelSpread
@@ -118,14 +120,11 @@ def positive(weights: np.ndarray, noncentrality: np.ndarray) -> float:
 
 def main() -> int:
     """Run, print the table and the bars; 1 where a bar is short."""
-    parser = argparse.ArgumentParser(description=__doc__)
-    parser.add_argument("--json")
-    parser.add_argument("--quick", action="store_true", help="two studies of four")
-    options = parser.parse_args()
+    chosen = options(__doc__)
     started = time.perf_counter()
     cells, spent, looked = [], 0, 0
     asked = [(24, 0.3, "x"), (36, 0.6, "site[north]"), (60, 0.8, "x"), (100, 0.4, "mean at the middle")]
-    for n, tail, focal in asked[: 2 if options.quick else 4]:
+    for n, tail, focal in asked[: 2 if chosen.quick else 4]:
         found, replicates, distinct = run(study(n, tail, focal))
         cells += found
         spent += replicates
@@ -146,18 +145,11 @@ def main() -> int:
     for cell in wrong:
         print("wrong:", cell)
     print(f"{spent:,} replicates spent; fixed at the cap: {looked * MOST:,}")
-    rate = len(wrong) / len(cells)
-    bars = [
-        ("verdict-cells", len(cells), ">= 500", len(cells) >= 500 or options.quick),
-        ("verdict-wrong-share", rate, "<= 0.01", rate <= 0.01),
-        ("verdict-replicates-saved", saved, ">= 5", saved >= 5.0),
-    ]
-    for name, figure, needed, met in bars:
-        print(f"BAR {name} {figure:.4f} {needed} {'met' if met else 'short'}")
-    if options.json:
-        with open(options.json, "w", encoding="utf-8") as file:
-            json.dump({"cells": cells, "bars": [[name, float(f), needed, bool(met)] for name, f, needed, met in bars]}, file)
-    return 0 if all(met for *_, met in bars) else 1
+    bars = Bars(chosen)
+    bars.at_least("verdict-cells", len(cells), 300 if chosen.quick else 500)
+    bars.at_most("verdict-wrong-share", len(wrong) / len(cells), DELTA)
+    bars.at_least("verdict-replicates-saved", saved, 5.0)
+    return bars.close()
 
 
 def run(asked: Study) -> tuple[list[dict[str, object]], int, int]:

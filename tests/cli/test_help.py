@@ -76,7 +76,9 @@ def test_schema_is_valid_and_knows_every_key(call):
     schema = json.loads(call("schema")[1])
     assert schema["$schema"].endswith("2020-12/schema")
     assert set(schema["properties"]) == {"title", "study", "departure", "procedures", "tolerance", "simulation"}
-    kinds = {d["properties"]["kind"]["const"] for d in schema["$defs"].values() if "const" in d.get("properties", {}).get("kind", {})}
+    kinds = {
+        d["properties"]["kind"]["const"] for d in schema["$defs"].values() if "const" in d.get("properties", {}).get("kind", {})
+    }
     assert kinds == set(DEPARTURES)
     for scenario in Path(__file__).parents[2].glob("scenarios/*.toml"):
         assert set(tomllib.loads(scenario.read_text(encoding="utf-8"))) <= set(schema["properties"])

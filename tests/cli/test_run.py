@@ -77,7 +77,9 @@ def test_second_run_goes_on_from_the_ledger(done, call, monkeypatch):
 
 def test_report_writes_the_same_page_again(done, call):
     place, _ = done
-    kept = {name: (place / name).read_bytes() for name in ("report.html", "summary.md", "statement.md", "measures.csv", "run.json")}
+    kept = {
+        name: (place / name).read_bytes() for name in ("report.html", "summary.md", "statement.md", "measures.csv", "run.json")
+    }
     (place / "report.html").unlink()
     (place / "summary.md").write_text("spoilt", encoding="utf-8")
     code, out, err = call("report", place)
@@ -153,7 +155,10 @@ def test_inspect_says_what_collinearity_costs(folder, call):
     r = np.corrcoef(table["x"], table["z"])[0, 1]
     told = json.loads(call("inspect", "two.csv", "--model", "y ~ x + z", "--focus", "x", "--json")[1])
     assert told["facts"]["widening"]["x"] == pytest.approx(1.0 / np.sqrt(1.0 - r**2), rel=1e-9)
-    assert f"{1.0 / np.sqrt(1.0 - r**2):.3g} times as wide" in call("inspect", "two.csv", "--model", "y ~ x + z", "--focus", "x")[1]
+    assert (
+        f"{1.0 / np.sqrt(1.0 - r**2):.3g} times as wide"
+        in call("inspect", "two.csv", "--model", "y ~ x + z", "--focus", "x")[1]
+    )
 
 
 def test_start_prints_a_scenario_that_run_accepts(folder, call):
@@ -164,9 +169,7 @@ def test_start_prints_a_scenario_that_run_accepts(folder, call):
     assert out.count("#") > 10
     (folder / "started.toml").write_text(out, encoding="utf-8")
     said = load_scenario(folder / "started.toml")
-    meant = loaded_from(
-        folder / "small.csv", {"model": "y ~ x + C(g)", "focus": ("x",), "order": "t", "effect": ("x=0.5",)}
-    )
+    meant = loaded_from(folder / "small.csv", {"model": "y ~ x + C(g)", "focus": ("x",), "order": "t", "effect": ("x=0.5",)})
     assert (said.study.digest, said.plan.digest) == (meant.study.digest, meant.plan.digest)
     assert call("inspect", "started.toml", "--quiet") == (0, "", "")
 

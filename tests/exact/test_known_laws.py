@@ -93,6 +93,24 @@ def test_a_miss_of_power_keeps_its_digits(design):
     assert found.within[0] < 1e-6
 
 
+@pytest.mark.parametrize("shift", [30.0, 1e3, 1e6])
+def test_power_far_out_is_one(design, shift):
+    assert power(OLS, design, coefficient(design), ideal(design), 0.95, np.array([shift * standard_error(design)])) == 1.0
+
+
+def test_few_residual_degrees_of_freedom():
+    """One degree of freedom: a noncentral t that is a ratio of normals, with tails that fall slowly."""
+    design = random_design(np.random.default_rng(3), 5, 4)
+    shifts = np.array([0.0, 1.0, 5.0, 50.0])
+    half = stats.t.isf(0.025, 1)
+    chi = np.linspace(0.0, 12.0, 400_001)[1:]
+    inside = [stats.norm.cdf(half * chi - shift) - stats.norm.cdf(-half * chi - shift) for shift in shifts]
+    weight = stats.chi.pdf(chi, 1) * (chi[1] - chi[0])
+    found = power(OLS, design, coefficient(design), ideal(design), 0.95, shifts * standard_error(design))
+    # The rectangle rule is off by half the weight at 0 times the width, where the interval is empty.
+    assert found == pytest.approx(1 - np.array([np.sum(each * weight) for each in inside]), abs=1e-6)
+
+
 @pytest.mark.parametrize("wanted", [0.5, 0.8, 0.95])
 def test_detectable_effect_solves_the_noncentral_t(design, wanted):
     critical = stats.t.isf(0.025, 16)
@@ -107,8 +125,8 @@ def test_detectable_effect_solves_the_noncentral_t(design, wanted):
 
 def test_detectable_effect_with_a_bias_reaches_the_power_wanted(design):
     rng = np.random.default_rng(2)
-    for _ in range(4):
-        disturbance = disturb(design, mean=rng.standard_normal(20))
+    for size in (0.3, 1.0, 1.0, 10.0, 1000.0):
+        disturbance = disturb(design, mean=size * rng.standard_normal(20))
         focus = coefficient(design)
         found = detectable_effect(OLS, design, focus, disturbance, 0.95)
         at = power(OLS, design, focus, disturbance, 0.95, np.array([found, 1.5 * found]))

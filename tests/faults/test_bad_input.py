@@ -4,7 +4,10 @@ import sqlite3
 
 import pytest
 
-ROWS = [line.split(",") for line in "1.2,1,a;2.9,2,a;2.1,3,b;4.6,4,b;4.8,5,c;6.3,6,c;6.2,7,d;8.9,8,d".replace(";", "\n").splitlines()]
+ROWS = [
+    line.split(",")
+    for line in "1.2,1,a;2.9,2,a;2.1,3,b;4.6,4,b;4.8,5,c;6.3,6,c;6.2,7,d;8.9,8,d".replace(";", "\n").splitlines()
+]
 
 
 def table(rows=ROWS, header="y,x,g"):

@@ -33,7 +33,11 @@ def test_documents_round_trip(document):
 
 
 def test_document_of_a_scenario_and_what_toml_lacks():
-    record = {"title": "t", "study": {"model": "y ~ x", "focus": [{"at": {"x": 1.0}}]}, "departure": [{"kind": "skew"}, {"kind": "fan"}]}
+    record = {
+        "title": "t",
+        "study": {"model": "y ~ x", "focus": [{"at": {"x": 1.0}}]},
+        "departure": [{"kind": "skew"}, {"kind": "fan"}],
+    }
     text = toml_document(record)
     assert tomllib.loads(text) == record
     assert text.count("[[departure]]") == 2

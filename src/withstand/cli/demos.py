@@ -38,11 +38,7 @@ def copy_demo(name: str, folder: Path) -> list[str]:
         If a file of the same name with other content is there, or the folder cannot be written to.
     """
     home = demos_home()
-    contents = {
-        source.name: source.read_bytes()
-        for source in home.iterdir()
-        if source.name in (f"{name}.toml", f"{name}.csv")
-    }
+    contents = {source.name: source.read_bytes() for source in home.iterdir() if source.name in (f"{name}.toml", f"{name}.csv")}
     fresh = {file: content for file, content in contents.items() if not (folder / file).exists()}
     for file in sorted(set(contents) - set(fresh)):
         if (folder / file).read_bytes() != contents[file]:

@@ -41,7 +41,9 @@ def status(arguments: Sequence[str] | None = None) -> int:
     """
     state = State()
     try:
-        withstand.main(args=None if arguments is None else list(arguments), prog_name="withstand", standalone_mode=False, obj=state)
+        withstand.main(
+            args=None if arguments is None else list(arguments), prog_name="withstand", standalone_mode=False, obj=state
+        )
     except click.exceptions.NoArgsIsHelpError as error:
         click.echo(error.ctx.get_help() if error.ctx else "", err=True)
         return REFUSED

@@ -17,8 +17,6 @@ def columns(rows: Sequence[Sequence[str]], left: Sequence[int] = (0,)) -> list[s
     """
     widths = [max(len(row[place]) for row in rows) for place in range(len(rows[0]))]
     return [
-        "  ".join(
-            ["", *(row[i].ljust(width) if i in left else row[i].rjust(width) for i, width in enumerate(widths))]
-        ).rstrip()
+        "  ".join(["", *(row[i].ljust(width) if i in left else row[i].rjust(width) for i, width in enumerate(widths))]).rstrip()
         for row in rows
     ]

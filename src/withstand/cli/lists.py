@@ -50,7 +50,14 @@ def _departures() -> list[dict[str, Any]]:
 
 def _procedures() -> list[dict[str, Any]]:
     return [
-        {"name": name, "title": cls.title, "source": cls.source, "family": cls.family, "formula": cls.formula, "options": _options(cls)}
+        {
+            "name": name,
+            "title": cls.title,
+            "source": cls.source,
+            "family": cls.family,
+            "formula": cls.formula,
+            "options": _options(cls),
+        }
         for name, cls in PROCEDURES.items()
     ]
 

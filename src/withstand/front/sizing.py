@@ -132,9 +132,7 @@ def rows_buy(
     focus: str | None = None, effect: float | None = None, growth: str | None = None,
 ) -> pd.DataFrame:  # fmt: skip
     """What given numbers of rows are good for; see `what_rows_buy`."""
-    return what_rows_buy(
-        study, procedures, rows, worlds_of(axes), focus=focus, effect=effect, rule=growth, effort=effort
-    )
+    return what_rows_buy(study, procedures, rows, worlds_of(axes), focus=focus, effect=effect, rule=growth, effort=effort)
 
 
 def worlds_of(axes: Sequence[Axis]) -> tuple[World, ...]:

@@ -78,7 +78,8 @@ def one_severity(companion: Departure) -> float:
     """
     if len(companion.ladder) != 1:
         raise ScenarioError(
-            f"'{companion.kind}' acts all the while here, and has not one severity", remedy="Give one number, as in severity = 1."
+            f"'{companion.kind}' acts all the while here, and has not one severity",
+            remedy="Give one number, as in severity = 1.",
         )
     return companion.ladder[0]
 

@@ -62,6 +62,10 @@ def _chosen(node: dict[str, Any], value: Any, definitions: dict[str, Any]) -> di
     fitting = [
         form
         for form in _forms(node, definitions)
-        if all(value.get(key, told["const"]) == told["const"] for key, told in form.get("properties", {}).items() if "const" in told)
+        if all(
+            value.get(key, told["const"]) == told["const"]
+            for key, told in form.get("properties", {}).items()
+            if "const" in told
+        )
     ]
     return {"anyOf": fitting}

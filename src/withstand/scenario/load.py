@@ -24,6 +24,7 @@ from withstand.scenario.source import Source
 from withstand.study.study import Study
 from withstand.study.table import read_table
 
+
 @dataclass(frozen=True, eq=False)
 class Loaded:
     """A scenario, ready to run.
@@ -68,9 +69,7 @@ def load_scenario(path: Path, overrides: Mapping[str, Mapping[str, Any]] | None 
     return load(source.parse(), source, path.stem, overrides)
 
 
-def load(
-    raw: Mapping[str, Any], source: Source, name: str, overrides: Mapping[str, Mapping[str, Any]] | None = None
-) -> Loaded:
+def load(raw: Mapping[str, Any], source: Source, name: str, overrides: Mapping[str, Mapping[str, Any]] | None = None) -> Loaded:
     """Turn the values of a scenario into a study and a plan.
 
     Parameters
@@ -150,7 +149,11 @@ def _procedures(part: ProceduresPart, study: Study, source: Source) -> tuple[Pro
     made = []
     for place, entry in enumerate(part.use):
         try:
-            procedure = make_procedure(entry) if isinstance(entry, str) else make_procedure(entry.name, **given_options(entry, ["name"]))
+            procedure = (
+                make_procedure(entry)
+                if isinstance(entry, str)
+                else make_procedure(entry.name, **given_options(entry, ["name"]))
+            )
             made.append(answering(procedure, study))
         except InputError as error:
             where = source.where(("procedures", "use", place))

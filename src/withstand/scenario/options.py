@@ -26,7 +26,9 @@ class Part(BaseModel):
     model_config = ConfigDict(extra="forbid", strict=True, allow_inf_nan=False, frozen=True)
 
 
-def option_model(base: type[Model], name: str, tag: str, value: str, cls: type, skip: Iterable[str] = (), **more: Any) -> type[Model]:
+def option_model(
+    base: type[Model], name: str, tag: str, value: str, cls: type, skip: Iterable[str] = (), **more: Any
+) -> type[Model]:
     """A table whose key `tag` is `value` and whose other keys are the options of a registered class.
 
     Parameters
@@ -86,7 +88,9 @@ def parameter_texts(cls: type) -> dict[str, str]:
     for level in reversed(cls.__mro__):
         text = cleandoc(level.__dict__.get("__doc__") or "")
         section = re.search(r"^Parameters\n-+\n(.*?)(?=\n\n\w+\n-+\n|\Z)", text, re.MULTILINE | re.DOTALL)
-        for names, told in re.findall(r"^(\w[\w, ]*) : [^\n]*\n((?:[ ]+[^\n]*\n?)+)", section.group(1) if section else "", re.MULTILINE):
+        for names, told in re.findall(
+            r"^(\w[\w, ]*) : [^\n]*\n((?:[ ]+[^\n]*\n?)+)", section.group(1) if section else "", re.MULTILINE
+        ):
             found |= dict.fromkeys(names.split(", "), " ".join(told.split()))
         if level is cls:
             found[""] = text.partition("\n")[0]

@@ -69,9 +69,7 @@ def _departure_models() -> list[type[Part]]:
     more: dict[str, Any] = {
         "companions": (companions, Field(default=[], alias="with", description="Further departures that act all the while."))
     }
-    return [
-        option_model(DeparturePart, f"{cls.__name__}Table", "kind", kind, cls, **more) for kind, cls in DEPARTURES.items()
-    ]
+    return [option_model(DeparturePart, f"{cls.__name__}Table", "kind", kind, cls, **more) for kind, cls in DEPARTURES.items()]
 
 
 def _procedure_models() -> list[type[Part]]:
@@ -105,9 +103,9 @@ class StudyPart(Part):
     decimal: Literal[".", ","] | None = Field(default=None, description='Decimal sign of the table, "." or ",".')
     plan: PlanPart | None = Field(default=None, description="A study that is still to be done, in place of data.")
     model: str = Field(description='Model formula, such as "y ~ a + b".')
-    focus: str | list[
-        Annotated[Annotated[str, Tag("text")] | Annotated[PointPart, Tag("table")], Discriminator(_written_as)]
-    ] = Field(default=[], description="What the decision hangs on: coefficients, terms, contrasts, means, new responses.")
+    focus: (
+        str | list[Annotated[Annotated[str, Tag("text")] | Annotated[PointPart, Tag("table")], Discriminator(_written_as)]]
+    ) = Field(default=[], description="What the decision hangs on: coefficients, terms, contrasts, means, new responses.")
     order: str | None = Field(default=None, description="Column with the order in time; needed for serial correlation.")
     groups: str | None = Field(default=None, description="Column with the groups whose rows may share an error.")
     weights: str | None = Field(default=None, description="Column with known weights: reciprocals of the error variance.")

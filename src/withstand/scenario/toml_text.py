@@ -48,7 +48,11 @@ def toml_document(values: Mapping[str, Any]) -> str:
             lines += ["", f"[{toml_key(key)}]", *(f"{toml_key(name)} = {toml_value(item)}" for name, item in value.items())]
         elif _tables(value):
             for table in value:
-                lines += ["", f"[[{toml_key(key)}]]", *(f"{toml_key(name)} = {toml_value(item)}" for name, item in table.items())]
+                lines += [
+                    "",
+                    f"[[{toml_key(key)}]]",
+                    *(f"{toml_key(name)} = {toml_value(item)}" for name, item in table.items()),
+                ]
     return "\n".join(lines).lstrip("\n") + "\n"
 
 
