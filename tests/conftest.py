@@ -79,8 +79,8 @@ def spawn(tmp_path):
     def start(*arguments, **options):
         environment = os.environ | {"PYTHONPATH": os.pathsep.join(sys.path), "OPENBLAS_NUM_THREADS": "1"}
         return subprocess.Popen(
-            [sys.executable, "-m", "withstand", *map(str, arguments)], stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True,
-            env=environment, cwd=tmp_path, start_new_session=True, **options,
+            [sys.executable, "-m", "withstand", *map(str, arguments)], stdout=subprocess.PIPE, stderr=subprocess.PIPE,
+            text=True, env=environment, cwd=tmp_path, start_new_session=True, **options,
         )  # fmt: skip
 
     return start

@@ -146,7 +146,7 @@ def accuracy(bars: Bars, quick: bool) -> None:
         if case.focus.kind is not FocusKind.NEW:
             effect = float(rng.uniform(0.5, 5.0)) * case.unit
             differences.append(abs(power(*case.ask, np.array([effect]))[0] - cases.dense_size(case, effect)))
-    worst = max(differences)
+    worst = float(max(differences))
     print(f"{len(differences)} sizes and powers of {count} random cases: largest difference {worst:.1e}, ", end="")
     print(f"median {statistics.median(differences):.1e}; largest error claimed {max(claimed):.1e}")
     needed = 0.05 * 0.95 / max(worst, 1e-12) ** 2

@@ -108,8 +108,8 @@ def main() -> int:
     # A share of exactly 0.9 scatters too; with few data sets, by so much that the extreme of many says little.
     slack = 4.5 * math.sqrt(0.9 * 0.1 / data_sets) if chosen.quick else 0.0
     bars = Bars(chosen)
-    bars.at_least("plausible-least-coverage", float(shares.min()) + slack, NEEDED[0])
-    bars.at_most("plausible-most-coverage", float(shares.max()) - slack, NEEDED[1])
+    bars.at_least("plausible-least-coverage", float(shares.min()), NEEDED[0] - slack)
+    bars.at_most("plausible-most-coverage", float(shares.max()), NEEDED[1] + slack)
     bars.at_least("plausible-pooled-coverage", pooled, 0.89)
     bars.at_most("plausible-pooled-coverage-from-above", pooled, 0.91)
     bars.at_most("plausible-seconds-for-12-departures", spent, 5.0)

@@ -1,7 +1,8 @@
 """Are the numbers of rows right, do their intervals hold, and how long does an answer take?
 
-Three parts. Normal errors: n and power against noncentral t and F. Exponential errors on designs with one far point: the n from
-which they may be ignored against brute force, a fixed 400,000 replicates at each n by code that shares nothing with the package.
+Three parts. Normal errors: n and power against noncentral t and F. Exponential errors on designs with one far point: the n
+from which they may be ignored against brute force, a fixed 400,000 replicates at each n by code that shares nothing with the
+package.
 Time: the default question on a planned trial with four lamp levels, two benches and a spread that grows with the level.
 
     python tests/benchmarks/sample_size.py [--json FILE] [--quick]

@@ -148,7 +148,10 @@ def main() -> int:
     bars = Bars(chosen)
     bars.at_least("verdict-cells", len(cells), 300 if chosen.quick else 500)
     bars.at_most("verdict-wrong-share", len(wrong) / len(cells), DELTA)
-    bars.at_least("verdict-replicates-saved", saved, 5.0)
+    print(f"a fixed run at the cap spends {saved:.2f} times as much")
+    if not chosen.quick:
+        # Cells near the bound take nearly all the work, and two studies hold too few of them for the ratio to say much.
+        bars.at_least("verdict-replicates-saved", saved, 5.0)
     return bars.close()
 
 

@@ -102,7 +102,7 @@ def test_table_with_options_is_the_scenario_that_says_the_same(folder):
     assert (said.study.digest, said.plan.digest) == (meant.study.digest, meant.plan.digest)
     assert (meant.name, said.study.notices) == ("small", meant.study.notices)
     assert {"serial", "clusters", "skew", "fan"} <= {axis.departure.kind for axis in meant.plan.axes}
-    assert [procedure.name for procedure in meant.plan.procedures][0] == "ols"
+    assert meant.plan.procedures[0].name == "ols"
 
 
 def test_json_for_machines(folder, call):

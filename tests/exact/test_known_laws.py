@@ -6,7 +6,7 @@ from scipy import optimize, special, stats
 
 from withstand.departures import World
 from withstand.errors import InputError, NumericalError
-from withstand.exact import can_be_exact, contour, coverage, detectable_effect, moments, power
+from withstand.exact import can_be_exact, contour, coverage, detectable_effect, moments, path, power
 from withstand.exact.moments import Moments
 from withstand.exact.problem import pose
 from withstand.procedures import make_procedure
@@ -180,8 +180,8 @@ def test_large_sample_coverage():
 
 
 def test_an_accuracy_that_is_not_reached_is_an_error(design, monkeypatch):
-    monkeypatch.setattr(contour, "_LEVELS", 1)
-    monkeypatch.setattr(contour, "_STEP", 4.0)
+    monkeypatch.setattr(path, "_LEVELS", 1)
+    monkeypatch.setattr(path, "_STEP", 4.0)
     with pytest.raises(NumericalError, match="was reached to"):
         coverage(OLS, design, coefficient(design), ideal(design), 0.95)
 

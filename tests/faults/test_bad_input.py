@@ -38,14 +38,23 @@ TABLES = {
     "text among numbers": (with_cell(4, 1, "<0.05"), ["--model", "y ~ x"], ["x", "<0.05", "row 6"]),
     "decimal comma": (
         "y;x;g\n" + "".join(f"{y.replace('.', ',')};{x};{g}\n" for y, x, g in ROWS),
-        ["--model", "y ~ x"], ["t.csv, row 2", "'y'", "1,2", '--decimal ","'],
+        ["--model", "y ~ x"],
+        ["t.csv, row 2", "'y'", "1,2", '--decimal ","'],
     ),
-    "no rows left": (table([[*row[:2], ""] if i % 2 else [row[0], "", row[2]] for i, row in enumerate(ROWS)]), ["--model", "y ~ x + g"], ["row"]),
+    "no rows left": (
+        table([[*row[:2], ""] if i % 2 else [row[0], "", row[2]] for i, row in enumerate(ROWS)]),
+        ["--model", "y ~ x + g"],
+        ["row"],
+    ),
     "rank deficient": (table([[*row, row[1]] for row in ROWS], "y,x,g,z"), ["--model", "y ~ x + z"], ["x", "z"]),
     "more columns than rows": (table(ROWS[:3]), ["--model", "y ~ x + C(g) + I(x**2)"], ["3 rows"]),
     "as many columns as rows": (table(ROWS[:2]), ["--model", "y ~ x"], ["2"]),
     "constant response": (table([["3", *row[1:]] for row in ROWS]), ["--model", "y ~ x"], ["y", "3"]),
-    "no residual variance": (table([[str(2 * float(row[1]) + 1), *row[1:]] for row in ROWS]), ["--model", "y ~ x"], ["without error"]),
+    "no residual variance": (
+        table([[str(2 * float(row[1]) + 1), *row[1:]] for row in ROWS]),
+        ["--model", "y ~ x"],
+        ["without error"],
+    ),
     "infinite value": (with_cell(2, 1, "inf"), ["--model", "y ~ x"], ["inf", "row 4"]),
     "column named twice": (table(header="y,x,x"), ["--model", "y ~ x"], ["'x'", "2 times"]),
     "formula that calls": (GOOD, ["--model", "y ~ __import__('os').system('touch owned')"], ["__import__"]),
@@ -59,7 +68,7 @@ TABLES = {
     "effect of no focus": (GOOD, ["--model", "y ~ x", "--effect", "q=2"], ["q"]),
     "level in percent": (GOOD, ["--model", "y ~ x", "--level", "95"], ["95", "--level"]),
     "few repetitions": (GOOD, ["--model", "y ~ x", "--repetitions", "5"], ["5", "--repetitions"]),
-}  # fmt: skip
+}
 SCENARIOS = {
     "unknown departure": (scenario('[[departure]]\nkind = "skwe"'), ["s.toml, line 5", "skwe", "'skew'"]),
     "unknown procedure": (scenario('[procedures]\nuse = ["hc9"]'), ["procedures.use 1", "hc9", "'hc"]),
@@ -69,13 +78,21 @@ SCENARIOS = {
     "clusters without groups": (scenario('[[departure]]\nkind = "clusters"'), ["departure 1", "clusters", "groups"]),
     "fan along an unknown column": (scenario('[[departure]]\nkind = "fan"\nalong = "xx"'), ["departure 1", "xx"]),
     "fan along text": (scenario('[[departure]]\nkind = "fan"\nalong = "g"'), ["departure 1", "'g'"]),
-    "severity out of range": (scenario('[[departure]]\nkind = "skew"\nseverity = [900]'), ["departure 1, severity", "900", "skew"]),
-    "correlation beyond one": (scenario('[[departure]]\nkind = "serial"\nseverity = [1.2]', 'order = "x"'), ["severity", "1.2"]),
+    "severity out of range": (
+        scenario('[[departure]]\nkind = "skew"\nseverity = [900]'),
+        ["departure 1, severity", "900", "skew"],
+    ),
+    "correlation beyond one": (
+        scenario('[[departure]]\nkind = "serial"\nseverity = [1.2]', 'order = "x"'),
+        ["severity", "1.2"],
+    ),
     "companion with a ladder": (
-        scenario('[[departure]]\nkind = "skew"\nwith = [{ kind = "fan", along = "x" }]'), ["departure 1, with 1", "one severity"],
+        scenario('[[departure]]\nkind = "skew"\nwith = [{ kind = "fan", along = "x" }]'),
+        ["departure 1, with 1", "one severity"],
     ),
     "two of a layer": (
-        scenario('[[departure]]\nkind = "skew"\nwith = [{ kind = "heavy-tails", severity = 0.2 }]'), ["skew", "heavy-tails"],
+        scenario('[[departure]]\nkind = "skew"\nwith = [{ kind = "heavy-tails", severity = 0.2 }]'),
+        ["skew", "heavy-tails"],
     ),
     "departure twice": (scenario('[[departure]]\nkind = "skew"\n[[departure]]\nkind = "skew"'), ["skew", "twice"]),
     "procedure twice": (scenario('[procedures]\nuse = ["ols", "ols"]'), ["ols", "twice"]),
@@ -84,9 +101,10 @@ SCENARIOS = {
     "known weights without weights": (scenario('[procedures]\nuse = ["known-weights"]'), ["procedures.use 1", "known-weights"]),
     "missing table": (scenario().replace("t.csv", "missing.csv"), ["missing.csv", "no such file"]),
     "hc3 at leverage one": (
-        scenario('[procedures]\nuse = ["hc3"]', model="y ~ x + one"), ["procedures.use 1", "hc3", "leverage"],
+        scenario('[procedures]\nuse = ["hc3"]', model="y ~ x + one"),
+        ["procedures.use 1", "hc3", "leverage"],
     ),
-}  # fmt: skip
+}
 
 
 @pytest.fixture

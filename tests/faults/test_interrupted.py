@@ -115,7 +115,7 @@ def test_no_room_for_the_results(folder, spawn, call):
     assert "cannot be written" in err
     assert err.count("\n") == 1
     assert not (folder / "full" / "measures.csv").exists()
-    assert not [path for path in (folder / "full").rglob(".*")]
+    assert not list((folder / "full").rglob(".*"))
     # nothing that was stored is lost: with room it goes on to the same numbers
     assert call("run", "small.toml", "--out", "full", "--workers", 1, "--quiet")[0] == 0
     assert call("run", "small.toml", "--out", "whole", "--workers", 1, "--quiet")[0] == 0

@@ -35,7 +35,7 @@ def threat(
 
 
 def say(name, severity):
-    return f"SD ratio {round_for_speech(severity):g}"
+    return "nothing wrong" if severity == 1.0 and name != "stack" else f"SD ratio {round_for_speech(severity):g}"
 
 
 def tell(*threats, **options):
@@ -80,6 +80,7 @@ def test_a_procedure_out_of_tolerance_with_nothing_wrong_is_said_to_be():
     broken = threat("fan", 0.9, at=1.0, turn=1.0)
     assert "it is out of tolerance even when nothing is wrong" in tell(broken)[0]
     assert "with nothing wrong, the worst tried, it covers" in tell(broken)[0]
+    assert "it is out of tolerance from SD ratio 1 on; at SD ratio 1," in tell(threat("stack", 0.9, at=1.0, turn=1.0))[0]
 
 
 def test_a_departure_turned_round_gives_downwards():

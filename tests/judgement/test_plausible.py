@@ -9,7 +9,7 @@ from withstand.departures.shape import HeavyTails, Skew
 from withstand.departures.spread import Fan
 from withstand.judgement.detectability import Detector, detectability
 from withstand.judgement.plausible import plausible_severities, severity_laws
-from withstand.judgement.residual_laws import Request, simulate
+from withstand.judgement.residual_laws import Request, default_replicates, simulate
 
 CASES = [
     (Fan(along="x"), 2.0),
@@ -136,3 +136,7 @@ def test_a_check_with_nothing_to_find_rejects_at_its_size(design, laws):
         assert abs(found.power - 0.05) < 0.005
         assert found.hard_to_see
     assert Detector.of(design, laws["fan"]).at(1000.0) is None
+
+
+def test_many_rows_are_given_fewer_replicates_but_never_too_few():
+    assert [default_replicates(n) for n in (10, 500, 1000, 2000, 100_000)] == [4000, 4000, 2000, 1000, 1000]

@@ -7,10 +7,11 @@ from withstand.judgement.sample_size import SizeSearch
 from withstand.judgement.size_points import Reading, Requirement, SizePoint, Sizes
 
 POWER = Requirement("power", "power", low=0.8, words="power at least 0.8")
+UP_TO_5000 = Sizes(4, 5000)
 COVERAGE = Requirement("coverage", "coverage", low=0.94)
 
 
-def search(curves, requirements, sizes=Sizes(4, 5000), noise=None, seed=0, delta=0.01):
+def search(curves, requirements, sizes=UP_TO_5000, noise=None, seed=0, delta=0.01):
     """Run a search on known curves; `noise` is the standard error of a reading, None for exact ones."""
     rng = np.random.default_rng(seed)
     looks = {"first": [], "second": []}
@@ -96,6 +97,27 @@ def test_an_exact_requirement_among_noisy_ones_is_told_to_the_row():
 
     found = SizeSearch([POWER, COVERAGE], judge, judge, Sizes(4, 5000)).run()
     assert found.n == found.low == found.high == next(n for n in range(4, 999) if curves["power"](n) >= 0.8)
+
+
+@pytest.mark.parametrize("noise", [0.0, 0.001])
+def test_what_was_not_read_where_others_fail_does_not_decide(noise):
+    # Coverage fails at 4 rows too, comes right at 20, and is read only where power does not clearly fail.
+    curves = {"power": rising(60.0), "coverage": lambda n: 0.95 - 0.2 / n}
+    truth = next(n for n in range(4, 999) if curves["power"](n) >= 0.8)
+    for seed in range(20):
+        rng = np.random.default_rng(seed)
+
+        def judge(n, rng=rng):
+            seen = {key: Reading(curves[key](n) + noise * rng.standard_normal(), noise) for key in curves}
+            if n > 4 and seen["power"].value + 5 * noise < 0.8:
+                del seen["coverage"]
+            return SizePoint(n, seen)
+
+        found = SizeSearch([COVERAGE, POWER], judge, judge, UP_TO_5000).run()
+        assert found.binding == "power"
+        assert found.low <= truth <= found.high
+        if noise == 0.0:
+            assert found.n == truth
 
 
 def test_crossings_of_a_smoothed_curve():

@@ -13,6 +13,9 @@ from withstand.errors import LedgerError
 from withstand.lab.conduct import conduct
 from withstand.lab.gather import Effort
 from withstand.lab.outcome import MEASURE_COLUMNS, RANKING_COLUMNS, TIPPING_COLUMNS, VERDICT_COLUMNS
+from withstand.report.result import Result
+from withstand.report.screen import screen
+from withstand.report.store import restore
 
 TABLES = {
     "measures": MEASURE_COLUMNS, "verdicts": VERDICT_COLUMNS, "tipping": TIPPING_COLUMNS, "ranking": RANKING_COLUMNS,
@@ -271,3 +274,19 @@ def test_what_was_capped_is_said(study, make_plan):
     assert any(
         notice.startswith(f"{open_ones} of {len(outcome.verdicts)} verdicts are unsettled") for notice in outcome.notices
     )
+
+
+def test_what_an_outcome_says_can_be_shown_stored_and_read_again(outcome, study, make_plan, tmp_path):
+    """Of a whole run, of a look without simulation, and of one that knows nothing yet."""
+    seen = conduct(study, make_plan(), simulate=False)
+    ignorant = conduct(study, make_plan(method="simulated"), simulate=False)
+    for name, one in (("whole", outcome), ("seen", seen), ("ignorant", ignorant)):
+        assert Result.of(one).report(tmp_path / name).is_file()
+        read = restore(tmp_path / name)
+        for table in TABLES:
+            pd.testing.assert_frame_equal(
+                getattr(read, table), getattr(one, table), check_exact=True, check_dtype=False, check_column_type=False
+            )
+        assert screen(read) == screen(one)
+    assert "takes simulation" in screen(seen)
+    assert "not judged" in screen(ignorant)

@@ -38,9 +38,7 @@ def data(effect=None):
 
 def test_every_corner_is_the_answer_to_its_own_question():
     found = size_over_ranges(two_arms(), OLS, (), {"error_sd": [2.0, 4.0], "effect": [1.0, 2.0]}, **POWER)
-    expected = [
-        size_study(two_arms(sd, effect), OLS, **POWER).n for sd in (2.0, 4.0) for effect in (1.0, 2.0)
-    ]
+    expected = [size_study(two_arms(sd, effect), OLS, **POWER).n for sd in (2.0, 4.0) for effect in (1.0, 2.0)]
     assert found.frame["n"].tolist() == expected
     assert list(found.frame["error_sd"]) == [2.0, 2.0, 4.0, 4.0]
     least, most = min(expected), max(expected)

@@ -8,6 +8,7 @@ from withstand.lab.conduct import conduct, leading
 from withstand.lab.gather import Effort, gather, open_bench
 from withstand.lab.grid import Grid
 from withstand.lab.judging import judge_exactly
+from withstand.lab.plan import Axis
 from withstand.lab.tipping import BISECTIONS, find_tippings
 
 
@@ -90,3 +91,16 @@ def test_without_leave_to_simulate_the_rungs_are_all_there_is(study, make_plan, 
         tipping = next(iter(find_tippings(gather(grid, bench), bench, leading(grid)).values()))
     assert {tipping.last_holds, tipping.first_gives} <= {1.0, 2.0, 6.0, None}
     assert tipping.point is None or not math.isnan(tipping.point)
+
+
+def test_a_stack_starts_from_its_companions_and_not_from_the_baseline(study, make_plan):
+    companion = ((Fan(along="hours"), 20.0),)
+    outcome = conduct(study, make_plan([Axis(Serial(severity=(0.2, 0.4)), companion)], procedures=("ols",)))
+    alone = conduct(study, make_plan([Fan(along="hours", severity=20.0)], procedures=("ols",)))
+    row = outcome.tipping.iloc[0]
+    # The fan alone is out of tolerance, so that no serial correlation is needed.
+    assert (row["tipping"], row["first_gives"]) == (0.0, 0.0)
+    fan = alone.measures.query("measure == 'coverage' and departure == 'fan' and severity == 20")["value"]
+    assert outcome.measures.query("measure == 'coverage' and departure == 'serial' and severity == 0")["value"].item() == (
+        pytest.approx(fan.item(), abs=1e-8)
+    )

@@ -37,6 +37,15 @@ def test_a_wrong_answer_stands_out(evidence):
     assert (record["largest_at"]["measure"], record["largest_at"]["severity"]) == ("coverage", 3.0)
 
 
+def test_without_a_fourth_moment_the_error_of_an_sd_is_not_believed(study, make_plan):
+    grid = Grid(study, make_plan([HeavyTails(severity=(0.2, 0.3))], procedures=("ols",), most=2000))
+    with open_bench(grid, Effort(verify=True)) as bench:
+        found = comparisons(gather(grid, bench))
+    # Student's t with 5 df has a fourth moment, with 3 1/3 df it has none.
+    assert {one.measure for one in found if one.cell.spot.severity == 0.2} >= {"bias", "empirical_sd"}
+    assert not [one for one in found if one.cell.spot.severity == 0.3]
+
+
 def test_nothing_to_compare_is_said_plainly(evidence):
     assert verification(dataclasses.replace(evidence, tallies={})) == {"comparisons": 0}
 
@@ -51,7 +60,11 @@ def test_nothing_to_compare_is_said_plainly(evidence):
     ],
 )
 def test_severities_are_said_with_the_digits_a_person_would_use(departure, severity, told):
-    assert spoken(departure, severity) == told
+    assert spoken(Axis(departure), severity) == told
+
+
+def test_at_neutral_the_companions_still_act():
+    assert spoken(Axis(Fan(along="x"), ((Skew(), 1.0),)), 1.0) == "SD ratio 1"
 
 
 def test_names_for_people_say_the_columns():

@@ -18,7 +18,9 @@ LAMP = {"lamp": Levels((0.0, 4.0, 8.0, 12.0)), "bench": Levels(("south", "north"
 
 
 def answer_of(*worlds, names=("ols", "hc3"), **options):
-    study = planned_study(StudyPlan(16, LAMP, error_sd=3.0), "y ~ lamp + bench", focus="lamp", effect={"lamp": 0.5}, name="A | B")
+    study = planned_study(
+        StudyPlan(16, LAMP, error_sd=3.0), "y ~ lamp + bench", focus="lamp", effect={"lamp": 0.5}, name="A | B"
+    )
     return size_study(study, tuple(make_procedure(name) for name in names), worlds, **options)
 
 
@@ -37,12 +39,15 @@ def simulated():
 def test_the_curve_shows_the_worst_world(exact):
     rows = worst_curve(exact, "ols", "power")
     assert rows["n"].is_monotonic_increasing
+    looked_at = []
     for row in rows.itertuples():
         same = exact.curve[
             (exact.curve["n"] == row.n) & (exact.curve["measure"] == "power") & (exact.curve["procedure"] == "ols")
         ]
-        assert len(same) == 2
         assert row.value == same["value"].min()
+        looked_at.append(len(same))
+    # Where one world fails the other need not be looked at; at the answer both are.
+    assert looked_at[-1] == 2
     assert shown_measures(exact) == ["coverage", "power"]
 
 

@@ -21,30 +21,66 @@ def refusal(text, tmp_path):
 
 
 CASES = {
-    "misspelt key": ('[study]\ndata = "a.csv"\nmodle = "y ~ x"\n', "s.toml, line 3, study.modle", "unknown key 'modle'", "Did you mean 'model'?"),
+    "misspelt key": (
+        '[study]\ndata = "a.csv"\nmodle = "y ~ x"\n',
+        "s.toml, line 3, study.modle",
+        "unknown key 'modle'",
+        "Did you mean 'model'?",
+    ),
     "misspelt table": (BASE + '[tolerence]\nsize = "cochran"\n', "s.toml, line 4, tolerence", "'tolerence'", "'tolerance'"),
     "unknown departure": (BASE + '[[departure]]\nkind = "skwe"\n', "line 4, departure 1", "unknown departure 'skwe'", "'skew'"),
     "no kind": (BASE + "[[departure]]\nseverity = [1]\n", "departure 1", "'kind' is missing", 'kind = "..."'),
     "unknown option": (BASE + '[[departure]]\nkind = "fan"\nalogn = "x"\n', "line 6, departure 1, alogn", "'alogn'", "'along'"),
-    "text for a number": (BASE + '[[departure]]\nkind = "skew"\nseverity = "much"\n', "departure 1, severity", "'much'", "a number"),
+    "text for a number": (
+        BASE + '[[departure]]\nkind = "skew"\nseverity = "much"\n',
+        "departure 1, severity",
+        "'much'",
+        "a number",
+    ),
     "option of a companion": (
-        BASE + '[[departure]]\nkind = "skew"\nwith = [{ kind = "serial", severty = 1 }]\n', "with 1, severty", "'severty'", "'severity'",
+        BASE + '[[departure]]\nkind = "skew"\nwith = [{ kind = "serial", severty = 1 }]\n',
+        "with 1, severty",
+        "'severty'",
+        "'severity'",
     ),
     "ladder of a companion": (
-        BASE + '[[departure]]\nkind = "skew"\nwith = [{ kind = "serial", severity = [0.1, 0.2] }]\n', "with 1, severity", "[0.1, 0.2]", "a number",
+        BASE + '[[departure]]\nkind = "skew"\nwith = [{ kind = "serial", severity = [0.1, 0.2] }]\n',
+        "with 1, severity",
+        "[0.1, 0.2]",
+        "a number",
     ),
     "one table for a list": (BASE + '[departure]\nkind = "skew"\n', "line 4, departure", "one table", "[[departure]]"),
-    "unknown procedure": (BASE + '[procedures]\nuse = ["ols", { name = "hcc" }]\n', "procedures.use 2", "unknown procedure 'hcc'", "'hc"),
+    "unknown procedure": (
+        BASE + '[procedures]\nuse = ["ols", { name = "hcc" }]\n',
+        "procedures.use 2",
+        "unknown procedure 'hcc'",
+        "'hc",
+    ),
     "option of a procedure": (BASE + '[procedures]\nuse = [{ name = "hac", lagz = 3 }]\n', "use 1, lagz", "'lagz'", "'lag'"),
-    "number for a procedure": (BASE + '[procedures]\nuse = ["ols", 3]\n', "procedures.use 2", "entry 2 of use is 3", "text in quotes"),
+    "number for a procedure": (
+        BASE + '[procedures]\nuse = ["ols", 3]\n',
+        "procedures.use 2",
+        "entry 2 of use is 3",
+        "text in quotes",
+    ),
     "no procedures": (BASE + "[procedures]\nuse = []\n", "procedures.use", "use is the list []", "1 or more"),
     "focus as number": (BASE + "focus = 3\n", "line 4, study.focus", "focus is 3", "text in quotes"),
     "key of a point": (BASE + "focus = [{ att = { x = 1 } }]\n", "study.focus 1, att", "'att'", "'at'"),
     "kind of a point": (BASE + 'focus = [{ at = { x = 1 }, of = "men" }]\n', "focus 1, of", "'men'", "'mean'"),
     "level in percent": (BASE + "level = 95\n", "line 4, study.level", "level is 95", "less than 1"),
     "unknown rows": (BASE + 'rows = "resample"\n', "line 4, study.rows", "'resample'", "'resampled'"),
-    "neither data nor plan": ('[study]\nmodel = "y ~ x"\n', "s.toml, line 1, study", "neither data nor a plan", 'data = "table.csv"'),
-    "both data and plan": (PLAN.replace("[study]\n", '[study]\ndata = "a.csv"\n') + "x = { levels = [1, 2] }\n", "study", "both", "one of them"),
+    "neither data nor plan": (
+        '[study]\nmodel = "y ~ x"\n',
+        "s.toml, line 1, study",
+        "neither data nor a plan",
+        'data = "table.csv"',
+    ),
+    "both data and plan": (
+        PLAN.replace("[study]\n", '[study]\ndata = "a.csv"\n') + "x = { levels = [1, 2] }\n",
+        "study",
+        "both",
+        "one of them",
+    ),
     "no study": ('title = "a"\n', "s.toml", "'study' is missing", "[study]"),
     "study as number": ("study = 3\n", "line 1, study", "study is 3", "a table"),
     "infinite effect": (BASE + "effect = { x = inf }\n", "line 4, study.effect.x", "inf", "finite"),
@@ -56,7 +92,7 @@ CASES = {
     "key of a column": (PLAN + "x = { levles = [1, 2] }\n", "line 7, study.plan.columns.x.levles", "'levles'", "'levels'"),
     "two ways of a column": (PLAN + 'x = { law = "normal", levels = [1] }\n', "columns.x", "levels and law", "one of"),
     "no error SD": (PLAN.replace("error_sd = 1\n", "") + "x = { levels = [1, 2] }\n", "study.plan", "how large", "error_sd"),
-}  # fmt: skip
+}
 
 
 @pytest.mark.parametrize("case", CASES)

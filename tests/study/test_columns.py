@@ -3,7 +3,8 @@ import pytest
 from scipy import stats
 
 from withstand.errors import ScenarioError
-from withstand.study.columns import Blocks, Drawn, InSequence, Levels, Shares, crossing, labels_of, spread_evenly
+from withstand.study.balance import crossing, spread_evenly
+from withstand.study.columns import Blocks, Drawn, InSequence, Levels, Shares, labels_of
 
 N = 200_000
 ALLOWED = 4.5

@@ -11,7 +11,12 @@ def frame(n=8, seed=2):
     rng = np.random.default_rng(seed)
     age = rng.normal(50, 12, n)
     return pd.DataFrame(
-        {"dose": np.tile([0.0, 2.0], n)[:n], "age": age, "weight": 1.2 * age + rng.normal(0, 5, n), "site": (["s", "n"] * n)[:n]}
+        {
+            "dose": np.tile([0.0, 2.0], n)[:n],
+            "age": age,
+            "weight": 1.2 * age + rng.normal(0, 5, n),
+            "site": (["s", "n"] * n)[:n],
+        }
     )
 
 

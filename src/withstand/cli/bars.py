@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sys
+from typing import Any
 
 from tqdm import tqdm
 
@@ -18,7 +19,7 @@ class Bars:
 
     def __init__(self, quiet: bool = False) -> None:
         self._disable = True if quiet else None
-        self._bar: tqdm[None] | None = None
+        self._bar: Any = None
 
     def phase(self, name: str, total: int) -> None:
         """Begin a phase of `total` steps."""

@@ -19,7 +19,7 @@ DEMOS = ("kiln_boards", "reservoir", "lamp_trial")
 @click.version_option(__version__, prog_name="withstand", message="%(prog)s %(version)s")
 @click.option("--debug", is_flag=True, help="Show where an error came from.")
 @click.pass_obj
-def withstand(state: State, debug: bool) -> None:
+def withstand(state: State, /, debug: bool) -> None:
     """Which broken regression assumption matters at your sample size, on your own design matrix."""
     state.debug = debug
 
@@ -30,7 +30,7 @@ def withstand(state: State, debug: bool) -> None:
 @with_place
 @with_speech
 @click.pass_obj
-def run(state: State, **options: Any) -> None:
+def run(state: State, /, **options: Any) -> None:
     """Find out what matters, and write the report.
 
     The same command again goes on where an interrupted run stopped.
@@ -45,7 +45,7 @@ def run(state: State, **options: Any) -> None:
 @with_effort
 @with_speech
 @click.pass_obj
-def inspect(state: State, **options: Any) -> None:
+def inspect(state: State, /, **options: Any) -> None:
     """Show the design, the fit and what is known without long simulation, in seconds."""
     from withstand.cli.running import inspect_input
 
@@ -71,7 +71,7 @@ def inspect(state: State, **options: Any) -> None:
 @with_folder
 @with_speech
 @click.pass_obj
-def size(state: State, **options: Any) -> None:
+def size(state: State, /, **options: Any) -> None:
     """Find the number of rows at which everything asked for is met."""
     from withstand.cli.sizing import size_input
 
@@ -82,7 +82,7 @@ def size(state: State, **options: Any) -> None:
 @click.argument("folder", metavar="DIR", type=click.Path(path_type=Path))
 @with_speech
 @click.pass_obj
-def report(state: State, folder: Path, **options: Any) -> None:
+def report(state: State, /, folder: Path, **options: Any) -> None:
     """Write the report again from a finished or half-finished run."""
     from withstand.cli.running import report_folder
 
@@ -114,7 +114,7 @@ def list_command(what: str, as_json: bool) -> None:
 @with_place
 @with_speech
 @click.pass_obj
-def demo(state: State, name: str, **options: Any) -> None:
+def demo(state: State, /, name: str, **options: Any) -> None:
     """Copy a demo scenario with invented data to the current folder and run it."""
     from withstand.cli.demos import run_demo
 

@@ -50,9 +50,11 @@ def loaded_from(input_path: Path, options: Mapping[str, Any]) -> Loaded:
         If the input cannot be used.
     """
     simulation = {key: options[key] for key in ("seed", "repetitions", "most", "method") if options.get(key) is not None}
-    study = {"decimal": options["decimal"]} if options.get("decimal") else {}
+    study: dict[str, Any] = {"decimal": options["decimal"]} if options.get("decimal") else {}
     if input_path.suffix.lower() == ".toml":
-        given = [key for key in _STUDY if options.get(key)]
+        if options.get("effect"):
+            study["effect"] = _effects(options["effect"])
+        given = [key for key in _STUDY if options.get(key) and key != "effect"]
         if given:
             raise click.UsageError(f"--{given[0]} goes with a table; the scenario {input_path} says it itself")
         return load_scenario(input_path, {"study": study, "simulation": simulation})

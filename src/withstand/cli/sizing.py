@@ -3,10 +3,9 @@
 from __future__ import annotations
 
 import math
-import re
 import textwrap
-from collections.abc import Sequence
-from contextlib import closing
+from collections.abc import Iterator, Sequence
+from contextlib import closing, contextmanager
 from dataclasses import fields, replace
 from pathlib import Path
 from typing import Any
@@ -34,9 +33,6 @@ from withstand.scenario.choices import fitting
 from withstand.scenario.load import Loaded
 from withstand.study.study import Study
 
-_WORLD = re.compile(r" under |(?= when nothing is wrong)")
-"""Between a requirement and the world it must be met in."""
-
 
 def size_input(
     state: State, input_path: Path, *, departures: Sequence[str], severities: Sequence[float], along: str | None,
@@ -59,7 +55,7 @@ def size_input(
         _say_table(rows_buy(study, axes, chosen, effort, at, focus=on, growth=growth), quiet, as_json)
         return
     targets = Targets(not only, power, half_width)
-    with closing(Bars(quiet or as_json)) as bars:
+    with _effect_is_an_option(), closing(Bars(quiet or as_json)) as bars:
         common: dict[str, Any] = {"tolerance": plan.tolerance, "focus": on, "growth": growth, "progress": bars}
         if ranges:
             corners = size_at_corners(study, axes, chosen, targets, effort, _ranges(ranges), **common)
@@ -72,6 +68,17 @@ def size_input(
         say_json(answer.as_record() | {"files": [str(path) for path in written]})
     elif not quiet:
         _say_answer(answer, written)
+
+
+@contextmanager
+def _effect_is_an_option() -> Iterator[None]:
+    """What is said of the effect is said of the option that gives it."""
+    try:
+        yield
+    except InputError as error:
+        if error.where != "study.effect":
+            raise
+        raise type(error)(error.what, where="--effect", remedy=error.remedy) from error
 
 
 def _axes(
@@ -97,10 +104,11 @@ def _axes(
 
 def _departure(kind: str, severity: float, along: str | None, study: Study) -> Departure:
     cls = departure_class(kind)
-    has_along = any(option.name == "along" for option in fields(cls))
+    options: dict[str, Any] = {"severity": severity}
+    if along is not None and any(option.name == "along" for option in fields(cls)):
+        options["along"] = along
     try:
-        made = cls(severity, along=along) if has_along and along is not None else cls(severity)
-        return fitting(made, study)
+        return fitting(cls(**options), study)
     except InputError as error:
         where = f"--{error.where.removeprefix('departure.')}" if error.where.startswith("departure.") else "--departure"
         raise type(error)(error.what, where=where, remedy=error.remedy) from error
@@ -143,11 +151,8 @@ def _say_corners(corners: CornerAnswer, written: Sequence[Path], quiet: bool, as
 
 def _asked(answer: SizeAnswer) -> list[str]:
     """What must be met, and in which worlds, each said once."""
-    parts = [_WORLD.split(one, maxsplit=1) for one in answer.asked]
-    worlds = list(dict.fromkeys(where for _, where in parts if where))
-    lines = _folded(f"Focus: {answer.focus}. Asked: {'; '.join(dict.fromkeys(what for what, _ in parts))}.")
-    if worlds:
-        lines += _folded(f"{'In each of these worlds' if len(worlds) > 1 else 'World'}: {'; '.join(worlds)}.")
+    lines = _folded(f"Focus: {answer.focus}. Asked: {'; '.join(answer.bounds)}.")
+    lines += _folded(f"{'In each of these worlds' if len(answer.worlds) > 1 else 'World'}: {'; '.join(answer.worlds)}.")
     return [answer.title, *lines, ""]
 
 
@@ -162,10 +167,10 @@ def _say_table(table: pd.DataFrame, quiet: bool, as_json: bool) -> None:
         shown = [["rows", "procedure", "covers", "power", "half width", "detectable effect", "world"]]
         shown += [
             [
-                str(row.n), row.procedure, _share(row.coverage), _share(row.power), _known(row.half_width),
-                _known(row.detectable_effect), row.world,
+                str(row["n"]), row["procedure"], _share(row["coverage"]), _share(row["power"]), _known(row["half_width"]),
+                _known(row["detectable_effect"]), row["world"],
             ]
-            for row in table.itertuples(index=False)
+            for row in table.to_dict("records")
         ]  # fmt: skip
         click.echo("\n".join(columns(shown, left=(1, 6))))
 

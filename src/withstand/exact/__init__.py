@@ -1,7 +1,7 @@
 """Answers without simulation: moments for any law, coverage, size and power for normal errors.
 
-`problem` brings a question into unit coordinates; a structure (`grouped`, `chain`, `band`, `modes`) gives the tilted laws of
-`tilt` without an n x n matrix; `contour` integrates them to probabilities.
+`problem` brings a question into unit coordinates; a structure (`grouped`, `compressed`, `chain`, `band`, `modes`) gives the
+tilted laws of `tilt` without an n x n matrix; `contour` and `path` integrate them to probabilities.
 """
 
 from withstand.exact.coverage import ExactResult, coverage

@@ -104,33 +104,74 @@ def size(
 
 
 def find_size(
-    study: Study, axes: Sequence[Axis], procedures: Sequence[Procedure], targets: Targets, effort: Effort, *,
-    tolerance: Tolerance | None = None, focus: str | None = None, effect: float | None = None, growth: str | None = None,
+    study: Study,
+    axes: Sequence[Axis],
+    procedures: Sequence[Procedure],
+    targets: Targets,
+    effort: Effort,
+    *,
+    tolerance: Tolerance | None = None,
+    focus: str | None = None,
+    effect: float | None = None,
+    growth: str | None = None,
     progress: Progress | None = None,
-) -> SizeAnswer:  # fmt: skip
+) -> SizeAnswer:
     """The smallest number of rows in every world of the axes; see `size_study`."""
     return size_study(
-        study, procedures, worlds_of(axes), targets=targets, tolerance=tolerance, focus=focus, effect=effect, rule=growth,
-        effort=effort, progress=progress,
-    )  # fmt: skip
+        study,
+        procedures,
+        worlds_of(axes),
+        targets=targets,
+        tolerance=tolerance,
+        focus=focus,
+        effect=effect,
+        rule=growth,
+        effort=effort,
+        progress=progress,
+    )
 
 
 def size_at_corners(
-    study: Study, axes: Sequence[Axis], procedures: Sequence[Procedure], targets: Targets, effort: Effort,
-    ranges: Mapping[str, Sequence[float]], *, tolerance: Tolerance | None = None, focus: str | None = None, effect: float | None = None,
-    growth: str | None = None, progress: Progress | None = None,
-) -> CornerAnswer:  # fmt: skip
+    study: Study,
+    axes: Sequence[Axis],
+    procedures: Sequence[Procedure],
+    targets: Targets,
+    effort: Effort,
+    ranges: Mapping[str, Sequence[float]],
+    *,
+    tolerance: Tolerance | None = None,
+    focus: str | None = None,
+    effect: float | None = None,
+    growth: str | None = None,
+    progress: Progress | None = None,
+) -> CornerAnswer:
     """The number of rows at every corner of the ranges of uncertain inputs; see `size_over_ranges`."""
     return size_over_ranges(
-        study, procedures, worlds_of(axes), ranges, effort=effort, targets=targets, tolerance=tolerance, focus=focus,
-        effect=effect, rule=growth, progress=progress,
-    )  # fmt: skip
+        study,
+        procedures,
+        worlds_of(axes),
+        ranges,
+        effort=effort,
+        targets=targets,
+        tolerance=tolerance,
+        focus=focus,
+        effect=effect,
+        rule=growth,
+        progress=progress,
+    )
 
 
 def rows_buy(
-    study: Study, axes: Sequence[Axis], procedures: Sequence[Procedure], effort: Effort, rows: Sequence[int], *,
-    focus: str | None = None, effect: float | None = None, growth: str | None = None,
-) -> pd.DataFrame:  # fmt: skip
+    study: Study,
+    axes: Sequence[Axis],
+    procedures: Sequence[Procedure],
+    effort: Effort,
+    rows: Sequence[int],
+    *,
+    focus: str | None = None,
+    effect: float | None = None,
+    growth: str | None = None,
+) -> pd.DataFrame:
     """What given numbers of rows are good for; see `what_rows_buy`."""
     return what_rows_buy(study, procedures, rows, worlds_of(axes), focus=focus, effect=effect, rule=growth, effort=effort)
 

@@ -14,7 +14,7 @@ from withstand.diagnostics.base import Tail
 from withstand.diagnostics.critical import Critical
 from withstand.diagnostics.for_departure import Chosen, statistic_for
 from withstand.judgement.plausible import SeverityLaw
-from withstand.judgement.residual_laws import REPLICATES, Request, simulate
+from withstand.judgement.residual_laws import Request, simulate
 from withstand.study.design import Design, Floats
 
 EVEN_CHANCE = 0.5
@@ -108,7 +108,7 @@ class Detector:
 
 
 def detectability(
-    design: Design, departure: Departure, severities: list[float], *, seed: int, replicates: int = REPLICATES
+    design: Design, departure: Departure, severities: list[float], *, seed: int, replicates: int | None = None
 ) -> list[Detectability] | None:
     """The power of a departure's residual statistic at some severities.
 

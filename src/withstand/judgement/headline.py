@@ -17,6 +17,9 @@ from withstand.judgement.verdict import Verdict
 Say = Callable[[str, float], str]
 """Says a severity of the named departure as a person would: 'SD ratio 2', 't with 5 df'."""
 
+NOTHING = "nothing wrong"
+"""What is said of a severity at which the assumption holds."""
+
 _NORMAL = 1.96
 """97.5 % point of the normal law."""
 
@@ -54,7 +57,7 @@ def headline(
     threats : sequence of Threat
         For this focus and the user's procedure, ranked: what to worry about first comes first. At least one.
     say : callable
-        Says a severity.
+        Says a severity; NOTHING where the assumption holds and nothing else is wrong.
     throughout : (str, float), optional
         The procedure that holds at every severity the residuals allow, with its premium over the user's own; name empty where
         none does. None where only one procedure was judged.
@@ -96,8 +99,10 @@ def _worry(n: int, interval: str, first: Threat, say: Say) -> str:
     worst = first.worst
     turn = first.tipping.point if first.tipping.point is not None else first.tipping.first_gives
     neutral = first.tipping.neutral
-    if first.tipping.always:
+    if first.tipping.always and say(first.departure, neutral) == NOTHING:
         gives = "it is out of tolerance even when nothing is wrong"
+    elif first.tipping.always:
+        gives = f"it is out of tolerance from {say(first.departure, neutral)} on"
     elif turn is None:
         gives = f"it gives at {say(first.departure, worst.severity)}"
     elif turn < neutral:
@@ -120,8 +125,8 @@ def _worry(n: int, interval: str, first: Threat, say: Say) -> str:
 
 
 def _where(threat: Threat, say: Say) -> str:
-    severity = threat.worst.severity
-    return "with nothing wrong" if severity == threat.tipping.neutral else f"at {say(threat.departure, severity)}"
+    told = say(threat.departure, threat.worst.severity)
+    return f"with {told}" if told == NOTHING else f"at {told}"
 
 
 def _does(spot: Spot) -> str:

@@ -17,7 +17,7 @@ from scipy.interpolate import PchipInterpolator
 from withstand.departures.base import Departure
 from withstand.diagnostics.base import observed as observed_sample
 from withstand.diagnostics.for_departure import Chosen, statistic_for
-from withstand.judgement.residual_laws import REPLICATES, Companions, Request, simulate
+from withstand.judgement.residual_laws import Companions, Request, simulate
 from withstand.judgement.severities import Span, span_of
 from withstand.study.design import Design, Floats
 
@@ -198,7 +198,7 @@ def severity_laws(
     *,
     seed: int,
     companions: Sequence[Companions] | None = None,
-    replicates: int = REPLICATES,
+    replicates: int | None = None,
 ) -> list[SeverityLaw | None]:
     """Simulate the law of each departure's residual statistic over its severities.
 
@@ -212,8 +212,8 @@ def severity_laws(
         Seed of the study's run.
     companions : sequence of tuple of (Departure, float), optional
         What acts besides each departure; nothing if left out.
-    replicates : int
-        Simulated values at each severity.
+    replicates : int, optional
+        Simulated values at each severity; fewer for many rows if left out.
 
     Returns
     -------
@@ -240,7 +240,7 @@ def plausible_severities(
     departures: Sequence[Departure],
     *,
     seed: int,
-    replicates: int = REPLICATES,
+    replicates: int | None = None,
     level: float = LEVEL,
 ) -> list[Plausible | None]:
     """The severities of each departure that the residuals of a response are compatible with.

@@ -24,8 +24,16 @@ Companions = tuple[tuple[Departure, float], ...]
 FIRST_BLOCK = 1 << 40
 """Number of the first block used here."""
 
-REPLICATES = 4000
-"""Default number of replicates; a tail share of 5 % then has a standard error of 0.34 %."""
+_MOST, _FEWEST = 4000, 1000
+"""Replicates by default: a tail share of 5 % has a standard error of 0.34 % with the one, 0.69 % with the other."""
+
+_DRAWS = 2_000_000
+"""Errors drawn at each severity, where the fewest replicates do not need more."""
+
+
+def default_replicates(n: int) -> int:
+    """Replicates for a design of n rows: fewer where rows are many, so that the answer comes in seconds."""
+    return min(_MOST, max(_FEWEST, _DRAWS // n))
 
 
 @dataclass(frozen=True, eq=False)
@@ -54,7 +62,7 @@ class Request:
         return World(((self.departure, severity), *self.companions))
 
 
-def simulate(design: Design, requests: Sequence[Request], *, seed: int, replicates: int = REPLICATES) -> list[Floats]:
+def simulate(design: Design, requests: Sequence[Request], *, seed: int, replicates: int | None = None) -> list[Floats]:
     """Simulate residual statistics.
 
     Parameters
@@ -65,8 +73,8 @@ def simulate(design: Design, requests: Sequence[Request], *, seed: int, replicat
         What to simulate.
     seed : int
         Seed of the study's run.
-    replicates : int
-        B, rounded up to whole blocks.
+    replicates : int, optional
+        B, rounded up to whole blocks; `default_replicates` if left out.
 
     Returns
     -------
@@ -74,7 +82,7 @@ def simulate(design: Design, requests: Sequence[Request], *, seed: int, replicat
         One a request: values of the statistic, absolute where the departure is mirrored.
     """
     width = block_width(design.n)
-    blocks = -(-replicates // width)
+    blocks = -(-(replicates or default_replicates(design.n)) // width)
     results = [np.empty((len(request.severities), blocks * width)) for request in requests]
     disturbances = [[request.world(float(s)).on(design) for s in request.severities] for request in requests]
     buffer = np.empty((design.n, width))

@@ -14,7 +14,7 @@ import numpy as np
 from scipy import stats
 
 from withstand.judgement.crossing import crossings
-from withstand.judgement.size_points import LOOKS, FoundSize, Requirement, SizePoint, Sizes
+from withstand.judgement.size_points import LOOKS, FoundSize, Reading, Requirement, SizePoint, Sizes
 
 FINE = 1.06
 """Bisection of simulated margins ends when the ends of the bracket are within this ratio."""
@@ -36,7 +36,7 @@ class SizeSearch:
     requirements : sequence of Requirement
         All must be met; at least one.
     judge : callable
-        Gives the readings of every requirement at an n.
+        Gives the readings of every requirement at an n; where one clearly is not met, others may be left out.
     confirm : callable
         The same with noise that `judge` has not used.
     sizes : Sizes
@@ -79,7 +79,9 @@ class SizeSearch:
         z = self._z(max(len(self._points), LOOKS))
         clear = 1
         for requirement in self._requirements:
-            reading = self._points[n].readings[requirement.key]
+            reading = self._points[n].readings.get(requirement.key)
+            if reading is None:
+                continue
             margin = requirement.margin(reading.value)
             if margin + z * reading.se < 0.0:
                 return -1
@@ -88,7 +90,7 @@ class SizeSearch:
         return clear
 
     def _z(self, looks: int) -> float:
-        return float(stats.norm.isf(self._delta / (2.0 * looks * len(self._requirements))))
+        return clear_from(self._delta, looks, len(self._requirements))
 
     def _double(self) -> tuple[int, int | None]:
         """The last n not clearly met and the first of two clearly met in a row, a chance hit at a small n being possible."""
@@ -136,8 +138,11 @@ class SizeSearch:
                 self._at(n)
         self._close_exact_bracket()
         for _ in range(_CONFIRMATIONS):
-            n = self._found().n
-            if n is None or any(max(n, point.n) <= FINE * min(n, point.n) for point in self._confirmed):
+            found = self._found()
+            n = found.n
+            if n is None or found.exact or found.high == self._sizes.smallest:
+                return
+            if any(max(n, point.n) <= FINE * min(n, point.n) for point in self._confirmed):
                 return
             self._confirmed.append(self._confirm(n))
 
@@ -146,9 +151,10 @@ class SizeSearch:
         while True:
             key = self._found().binding
             requirement = next(r for r in self._requirements if r.key == key)
-            readings = {n: point.readings[key] for n, point in sorted(self._points.items())}
-            failing = [n for n, reading in readings.items() if requirement.margin(reading.value) < 0.0]
-            if not all(reading.exact for reading in readings.values()) or not failing:
+            readings = {n: self._points[n].readings.get(key) for n in sorted(self._points)}
+            # Where it was not read, others failed.
+            failing = [n for n, seen in readings.items() if seen is None or requirement.margin(seen.value) < 0.0]
+            if not failing or not all(seen is None or seen.exact for seen in readings.values()):
                 return
             failed = failing[-1]
             met = min((n for n in readings if n > failed), default=None)
@@ -169,17 +175,29 @@ class SizeSearch:
             points=tuple(self._points[n] for n in sorted(self._points)),
             confirmed=tuple(self._confirmed),
             binding=binding,
-            exact=self._all_exact,
+            exact=all(point.readings[binding].exact for point in self._points.values() if binding in point.readings),
         )
 
     def _crossings(self, requirement: Requirement) -> tuple[float | None, float | None, float | None]:
         """Where the smoothed margin, its upper band and its lower band cross zero; None where they do not."""
         points = sorted([*self._points.values(), *self._confirmed], key=lambda point: point.n)
+        looks = len(points)
+        unread = [place for place, point in enumerate(points) if requirement.key not in point.readings]
+        points = points[unread[-1] + 1 :] if unread else points
+        first = points[0].readings[requirement.key] if points else Reading(math.inf)
+        if unread and requirement.margin(first.value) >= self._z(looks) * first.se:
+            # Others failed where it was not read, and it is met beyond: it asks for no more rows than they do.
+            return (float(self._sizes.smallest),) * 3
         n = np.array([point.n for point in points], dtype=float)
         readings = [point.readings[requirement.key] for point in points]
         margins = np.array([requirement.margin(reading.value) for reading in readings])
         errors = np.array([reading.se for reading in readings])
-        return crossings(n, margins, errors, self._z(len(points)))
+        return crossings(n, margins, errors, self._z(looks))
+
+
+def clear_from(delta: float, looks: int, requirements: int) -> float:
+    """Standard errors from which a margin is clear of zero, all looks and requirements sharing the accepted error."""
+    return float(stats.norm.isf(delta / (2.0 * looks * requirements)))
 
 
 def _largest(ends: Sequence[float | None]) -> float | None:

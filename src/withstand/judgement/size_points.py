@@ -6,7 +6,6 @@ import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 
-
 LOOKS = 16
 """Numbers of rows that a search is expected to look at: each is told apart from its bound with that share of the error."""
 
@@ -24,7 +23,9 @@ class Requirement:
     low, high : float
         Accepted range; infinite where a side is free.
     words : str
-        As a person would say it.
+        As a person would say it, with the world.
+    bound : str
+        The same without the world.
     condition : int
         Number of the world in which it must be met.
     """
@@ -34,16 +35,12 @@ class Requirement:
     low: float = -math.inf
     high: float = math.inf
     words: str = ""
+    bound: str = ""
     condition: int = 0
 
     def margin(self, value: float) -> float:
         """How far a value is inside the range, in the unit of the measure; negative outside."""
         return min(value - self.low, self.high - value)
-
-    @property
-    def bound(self) -> float:
-        """The bound, where there is one; the upper of two."""
-        return self.high if math.isfinite(self.high) else self.low
 
 
 @dataclass(frozen=True)
@@ -113,7 +110,7 @@ class FoundSize:
     binding : str
         Key of the requirement that asks for the most rows.
     exact : bool
-        Whether no Monte Carlo error is in it.
+        Whether no Monte Carlo error is in the requirement that decides.
     """
 
     n: int | None

@@ -86,7 +86,7 @@ def what_rows_buy(
     found = []
     for n in rows:
         if n < 1:
-            raise ScenarioError(f"{n} rows buy nothing", where="--rows", remedy="Give positive whole numbers.")
+            raise ScenarioError(f"{n} rows buy nothing", where="--at", remedy="Give positive whole numbers.")
         grown = growth.at(n)
         for procedure in procedures:
             for world in worlds or (World(),):

@@ -98,7 +98,7 @@ def leading(grid: Grid) -> list[int | None]:
 def _headline(assessment: Assessment, threats: Sequence[Threatened], residuals: Mapping[str, Residuals]) -> tuple[str, ...]:
     """Sentences for each focal quantity in turn, about the procedure judged most closely."""
     grid = assessment.grid
-    departures = {assessment.names[axis.identity]: axis.departure for axis in grid.possible}
+    axes = {assessment.names[axis.identity]: axis for axis in grid.possible}
     sentences: list[str] = []
     for focus, procedure in enumerate(leading(grid)):
         mine = [one for one in threats if (one.procedure, one.focus) == (procedure, focus)]
@@ -115,7 +115,7 @@ def _headline(assessment: Assessment, threats: Sequence[Threatened], residuals: 
             grid.study.level,
             grid.study.focus[focus].name,
             [one.threat for one in mine],
-            lambda name, severity: spoken(departures[name], severity),
+            lambda name, severity: spoken(axes[name], severity),
             throughout=assessment.throughout(focus, procedure),
             detectability=seen,
         )

@@ -78,7 +78,7 @@ def residuals_of(grid: Grid) -> dict[str, Residuals]:
 
 
 def feared(axis: Axis, residuals: Residuals | None) -> tuple[float, ...]:
-    """Severities at which harm is looked at, neutral left out.
+    """Severities at which harm is looked at; neutral is left out where it is the baseline, without companions.
 
     The ends of the plausible range and the rungs of the ladder within it; the whole ladder where the residuals do not say.
     """
@@ -89,14 +89,18 @@ def feared(axis: Axis, residuals: Residuals | None) -> tuple[float, ...]:
     ends = plausible.worst_case(ladder, neutral)
     outward = {_outwards(ends[0], down=True), *ends[1:-1], _outwards(ends[-1], down=False)}
     inside = {severity for severity in ladder if plausible.holds(severity)}
-    return tuple(sorted((outward | inside) - {neutral}))
+    return tuple(sorted(outward | inside if axis.companions else (outward | inside) - {neutral}))
 
 
 def points_of(axes: Sequence[Axis], residuals: dict[str, Residuals]) -> list[tuple[Axis, float]]:
-    """Every axis with its ladder and the severities to be feared besides, in increasing order."""
+    """Every axis with its ladder and the severities to be feared besides, in increasing order.
+
+    A stack is visited at neutral as well, where its companions act alone.
+    """
     points = []
     for axis in axes:
         severities = {*axis.departure.ladder, *feared(axis, residuals.get(axis.identity))}
+        severities |= {axis.departure.neutral} if axis.companions else set()
         points += [(axis, severity) for severity in sorted(severities)]
     return points
 

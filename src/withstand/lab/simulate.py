@@ -15,6 +15,8 @@ from withstand.lab.grid import Cell
 from withstand.measures.compute import CONFIDENCE, PROPORTIONS, Estimate, measure
 from withstand.measures.names import applicable_measures
 
+_REACH = float(stats.norm.isf((1.0 - CONFIDENCE) / 2.0))
+
 
 def tallies_of(runner: Runner, cells: Iterable[Cell]) -> dict[Cell, Tally]:
     """What the ledger holds of each cell; cells without a replicate are left out."""
@@ -82,7 +84,7 @@ def _sharpened(name: str, estimate: Estimate, known: CellAnswers, is_baseline: b
     if estimate.shift_se == 0.0 or math.isnan(estimate.shift):
         return estimate
     value = min(max(known[name].estimate.value + estimate.shift, 0.0), 1.0)
-    reach = float(stats.norm.isf((1.0 - CONFIDENCE) / 2.0)) * estimate.shift_se
+    reach = _REACH * estimate.shift_se
     return replace(
         estimate,
         value=value,

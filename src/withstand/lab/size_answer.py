@@ -27,12 +27,14 @@ class ProcedureSize:
         Rows to collect; None where no number of rows will do, none up to the largest did, or the procedure does not apply.
     low, high : int or None
         Interval of n; the same as n where it is exact, None where there is none.
+    least : bool
+        Whether n is the smallest number of rows that was possible.
     bounded : bool
         Whether `high` is an end of the interval; False where the search ended first.
     method : str
-        "exact" or "simulated".
+        "exact" or "simulated": how the requirement was answered that asks for the most rows.
     binding : str
-        The requirement that asks for the most rows, or that fails.
+        That requirement, or the one that fails.
     no_cure : bool
         Whether the large-sample limit itself is outside what is asked.
     limit : float or None
@@ -51,6 +53,7 @@ class ProcedureSize:
     n: int | None
     low: int | None = None
     high: int | None = None
+    least: bool = False
     bounded: bool = True
     method: str = "exact"
     binding: str = ""
@@ -72,7 +75,7 @@ class SizeAnswer:
     title, focus : str
         Of the study, and of the focal quantity.
     asked : tuple of str
-        The requirements in words.
+        The requirements in words, each with its world.
     sizes : tuple of ProcedureSize
         In the order asked for.
     curve : DataFrame
@@ -89,6 +92,8 @@ class SizeAnswer:
         What the answer is over the range of an uncertain input.
     range_record : tuple of mapping
         The same as plain values, one a corner and procedure.
+    bounds, worlds : tuple of str
+        The requirements in words without their worlds, and the worlds, each once.
     """
 
     title: str
@@ -102,6 +107,8 @@ class SizeAnswer:
     have: int | None = None
     range_sentences: tuple[str, ...] = ()
     range_record: tuple[dict[str, Any], ...] = ()
+    bounds: tuple[str, ...] = ()
+    worlds: tuple[str, ...] = ()
 
     @property
     def best(self) -> ProcedureSize | None:
@@ -129,7 +136,8 @@ class SizeAnswer:
         return {
             "title": self.title,
             "focus": self.focus,
-            "asked": list(self.asked),
+            "asked": list(self.bounds),
+            "worlds": list(self.worlds),
             "n": self.n,
             "best": None if self.best is None else self.best.procedure,
             "level": self.level,
@@ -169,6 +177,8 @@ def _none(size: ProcedureSize) -> str:
 
 
 def _span(size: ProcedureSize, level: float) -> str:
+    if size.low == size.high == size.n and size.least:
+        return "the fewest that were possible"
     if size.low == size.high == size.n and size.method == "exact":
         return "exactly"
     return f"{100 * level:g} % interval {size.low} to {size.high}{'' if size.bounded else ' or more'}"

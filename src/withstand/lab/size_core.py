@@ -8,6 +8,7 @@ from concurrent.futures import Executor
 import pandas as pd
 
 from withstand.errors import ScenarioError
+from withstand.judgement.size_points import Requirement
 from withstand.lab.observed import instead_of_observed_power
 from withstand.lab.progress import Progress
 from withstand.lab.size_answer import CURVE_COLUMNS, ProcedureSize, SizeAnswer
@@ -28,23 +29,25 @@ def size_once(question: SizeQuestion, executor: Executor, progress: Progress) ->
     _refuse_observed_power(question)
     sizes: list[ProcedureSize] = []
     frames: list[dict[str, object]] = []
-    asked: dict[str, None] = {}
+    asked: list[Requirement] = []
     for procedure in question.procedures:
         requirements = question.requirements(procedure)
-        asked |= dict.fromkeys(requirement.words for requirement in requirements)
+        asked += requirements
         one = ProcedureSearch(question, procedure, requirements, executor, progress)
         sizes.append(one.size())
         frames += one.rows
     return SizeAnswer(
         question.study.name,
         question.focus.name,
-        tuple(asked),
+        tuple(dict.fromkeys(requirement.words for requirement in asked)),
         tuple(sizes),
         _curve(frames),
         question.growth.sentence,
         1.0 - question.effort.delta,
         question.study.notices,
         None if question.study.grow is not None else question.study.n,
+        bounds=tuple(dict.fromkeys(requirement.bound for requirement in asked)),
+        worlds=tuple(condition.name for condition in question.conditions),
     )
 
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from concurrent.futures import Executor
 from contextlib import closing
 from dataclasses import dataclass, field, replace
@@ -42,6 +42,8 @@ class Look:
         Where tasks run.
     progress : Progress
         Who is told.
+    asked : frozenset of int, optional
+        Numbers of the worlds to look at; all of them if left out.
     """
 
     procedure: Procedure
@@ -50,12 +52,13 @@ class Look:
     effort: Effort
     executor: Executor
     progress: Progress = field(default_factory=Silent)
+    asked: frozenset[int] | None = None
 
     def grid(self, study: Study, seed: int) -> TableGrid:
         """The worlds laid out on a study that has one focal quantity."""
         # The tolerance is in the requirements; the plan's own is not looked at.
         plan = Plan(
-            axes_through(self.conditions),
+            axes_through(list(self._conditions.values())),
             (self.procedure,),
             seed=seed,
             repetitions=self.effort.repetitions,
@@ -63,6 +66,18 @@ class Look:
             method="auto" if self.effort.method == "auto" else "simulated",
         )
         return TableGrid(study, plan)
+
+    def only(self, worlds: Collection[int]) -> Look:
+        """The same at some of the worlds, by number; they keep their numbers."""
+        return replace(self, asked=frozenset(worlds))
+
+    @property
+    def _conditions(self) -> dict[int, Condition]:
+        return {i: condition for i, condition in enumerate(self.conditions) if self.asked is None or i in self.asked}
+
+    @property
+    def _requirements(self) -> list[Requirement]:
+        return [requirement for requirement in self.requirements if requirement.condition in self._conditions]
 
     def answers(self, study: Study, seed: int, to_the_cap: bool = False) -> dict[int, CellAnswers]:
         """Answers by number of the condition, with as many replicates as it takes to tell, or as many as the cap allows."""
@@ -72,31 +87,40 @@ class Look:
             found = self._averaged(grid, to_the_cap)
         if not self._answered(found):
             found = self._simulated(grid, found, to_the_cap)
-        return {i: found[condition.world.key] for i, condition in enumerate(self.conditions)}
+        return {i: found[condition.world.key] for i, condition in self._conditions.items()}
 
     def readings(self, study: Study, seed: int, to_the_cap: bool = False) -> tuple[dict[str, Reading], dict[int, CellAnswers]]:
         """The requirements' measures by key, and everything that was found."""
         answers = self.answers(study, seed, to_the_cap)
-        return {r.key: reading(answers[r.condition], r.measure) for r in self.requirements}, answers
+        return {r.key: reading(answers[r.condition], r.measure) for r in self._requirements}, answers
 
     def _averaged(self, grid: TableGrid, to_the_cap: bool) -> Mapping[str, CellAnswers]:
-        average = TableAverage(grid, [condition.world.key for condition in self.conditions])
+        average = TableAverage(grid, [condition.world.key for condition in self._conditions.values()])
         found: Mapping[str, CellAnswers] = {}
         for look, tables in enumerate(TABLES, start=1):
             found = average.extend(tables)
-            if not self._answered(found) or (not to_the_cap and all(self._clear(r, found, look) for r in self.requirements)):
+            if not self._answered(found):
+                break
+            clear = [self._clear(requirement, found, look) for requirement in self._requirements]
+            if not to_the_cap and (all(clear) or -1 in clear):
                 break
         return found
 
     def _simulated(self, grid: TableGrid, known: Mapping[str, CellAnswers], to_the_cap: bool) -> Mapping[str, CellAnswers]:
+        failed = False
+
         def settled(evidence: Evidence, some: Sequence[Cell]) -> bool:
-            if to_the_cap:
-                return False
+            nonlocal failed
+            if to_the_cap or failed:
+                # One world in which something is clearly not met is enough.
+                return failed
             now = {grid.place(cell): evidence.answers(cell) | known.get(grid.place(cell), {}) for cell in some}
-            asked = [r for r in self.requirements if self._key(r) in now]
+            asked = [r for r in self._requirements if self._key(r) in now]
             repetitions = max(tally.replicates for cell, tally in evidence.tallies.items() if cell in some)
             look = max(grid.looks.reached(repetitions), 1)
-            return all(self._clear(requirement, now, look) for requirement in asked)
+            clear = [self._clear(requirement, now, look) for requirement in asked]
+            failed = -1 in clear
+            return failed or all(clear)
 
         means = Means(workers=self.effort.workers, progress=self.progress)
         with closing(Ledger(None)) as ledger:
@@ -104,18 +128,19 @@ class Look:
         return {grid.place(cell): evidence.answers(cell) | known.get(grid.place(cell), {}) for cell in evidence.cells}
 
     def _answered(self, found: Mapping[str, CellAnswers]) -> bool:
-        return all(_measured(r.measure) in found.get(self._key(r), {}) for r in self.requirements) and all(
-            condition.world.key in found for condition in self.conditions
+        return all(_measured(r.measure) in found.get(self._key(r), {}) for r in self._requirements) and all(
+            condition.world.key in found for condition in self._conditions.values()
         )
 
     def _key(self, requirement: Requirement) -> str:
         return self.conditions[requirement.condition].world.key
 
-    def _clear(self, requirement: Requirement, found: Mapping[str, CellAnswers], look: int) -> bool:
-        """Whether the margin can be told from zero; the looks share the accepted chance of error."""
+    def _clear(self, requirement: Requirement, found: Mapping[str, CellAnswers], look: int) -> int:
+        """1 where it is clearly met, -1 where it clearly is not, else 0; the looks share the accepted chance of error."""
         seen = reading(found[self._key(requirement)], requirement.measure)
         chance = spending(self.effort.delta, look) / (LOOKS * len(self.requirements))
-        return abs(requirement.margin(seen.value)) > float(stats.norm.isf(chance / 2.0)) * seen.se
+        margin, reach = requirement.margin(seen.value), float(stats.norm.isf(chance / 2.0)) * seen.se
+        return 1 if margin >= reach else -1 if margin < -reach else 0
 
 
 def axes_through(conditions: Sequence[Condition]) -> tuple[Axis, ...]:

@@ -184,7 +184,7 @@ def requirements_of(
     for i, condition in enumerate(conditions):
         told = f" under {condition.name}" if not condition.world.baseline else " when nothing is wrong"
         found += [
-            replace(r, key=f"{i}|{r.measure}", words=r.words + told, condition=i)
+            replace(r, key=f"{i}|{r.measure}", words=r.words + told, bound=r.words, condition=i)
             for r in _of(targets, tolerance, study, procedure, focus)
         ]
     return tuple(found)

@@ -67,7 +67,7 @@ class CornerAnswer:
         return tuple(told)
 
     def _corner(self, corner: Mapping[str, Any]) -> str:
-        return ", ".join(f"{name} {corner[name]:g}" for name in self.inputs)
+        return ", ".join(f"{name} {corner[name]:.4g}" for name in self.inputs)
 
     def as_record(self) -> list[dict[str, Any]]:
         """The corners as plain values."""

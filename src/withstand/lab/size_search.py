@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from concurrent.futures import Executor
 from dataclasses import replace
 
 from withstand.errors import InputError
-from withstand.judgement.sample_size import SizeSearch
-from withstand.judgement.size_points import FoundSize, Reading, Requirement, SizePoint, Sizes
+from withstand.judgement.sample_size import SizeSearch, clear_from
+from withstand.judgement.size_points import LOOKS, FoundSize, Reading, Requirement, SizePoint, Sizes
 from withstand.lab.frames import CellAnswers
 from withstand.lab.progress import Progress
 from withstand.lab.size_answer import ProcedureSize
@@ -34,8 +34,8 @@ class ProcedureSearch:
         self.procedure = procedure
         self.requirements = requirements
         self.rows: list[dict[str, object]] = []
+        self._suspect: int | None = None
         self._look = Look(procedure, question.conditions, requirements, question.effort, executor, progress)
-        self._simulated = False
 
     def size(self) -> ProcedureSize:
         """Limit first, then the search."""
@@ -58,9 +58,9 @@ class ProcedureSearch:
             return ProcedureSize(name, None, reason=reason)
         sizes = Sizes(start, max(self.question.effort.largest, start), self.question.growth.step)
         found = SizeSearch(self.requirements, self._judge, self._confirm, sizes, self.question.effort.delta).run()
-        return self._told(found, limits.worst_coverage)
+        return self._told(found, start, limits.worst_coverage)
 
-    def _told(self, found: FoundSize, limit: float | None) -> ProcedureSize:
+    def _told(self, found: FoundSize, smallest: int, limit: float | None) -> ProcedureSize:
         binding = next(r for r in self.requirements if r.key == found.binding)
         # The last second look is the one nearest to the answer.
         second = found.confirmed[-1] if found.confirmed and found.n is not None else None
@@ -69,8 +69,9 @@ class ProcedureSearch:
             found.n,
             found.low if found.n is not None else None,
             found.high if found.n is not None else None,
+            found.n == smallest,
             found.bounded,
-            "simulated" if self._simulated else "exact",
+            "exact" if found.exact else "simulated",
             binding.words,
             limit=limit,
             confirmed_at=None if second is None else second.n,
@@ -79,7 +80,7 @@ class ProcedureSearch:
         )
         if found.n is not None:
             return size
-        last = found.points[-1]
+        last = next(point for point in reversed(found.points) if binding.key in point.readings)
         return replace(
             size,
             reason=f"not met up to {last.n} rows, where {binding.measure.replace('_', ' ')} is "
@@ -123,17 +124,33 @@ class ProcedureSearch:
     def _point(self, n: int, look: str, turn: int) -> SizePoint:
         if self._refused(n) is not None:
             return SizePoint(n, {r.key: _no_answer(r) for r in self.requirements})
-        study = self.question.at(n)
-        readings, answers = self._look.readings(study, noise_seed(self.question.effort.seed, n, turn), turn > 0)
-        self._simulated |= any(not reading.exact for reading in readings.values())
+        study, seed = self.question.at(n), noise_seed(self.question.effort.seed, n, turn)
+        worlds = set(range(len(self.question.conditions)))
+        if turn > 0 or self._suspect is None or len(worlds) == 1:
+            readings, answers = self._look.readings(study, seed, turn > 0)
+        else:
+            # Where the world that failed last fails again, the others need not be looked at.
+            readings, answers = self._look.only({self._suspect}).readings(study, seed)
+            if not self._fails(readings):
+                more, others = self._look.only(worlds - {self._suspect}).readings(study, seed)
+                readings, answers = readings | more, answers | others
+        worst = min((r for r in self.requirements if r.key in readings), key=lambda r: r.margin(readings[r.key].value))
+        if self._fails(readings):
+            self._suspect = worst.condition
         self.rows += self._curve_rows(n, study.n, look, answers)
         return SizePoint(n, readings)
+
+    def _fails(self, readings: Mapping[str, Reading]) -> bool:
+        """Whether something clearly is not met."""
+        z = clear_from(self.question.effort.delta, LOOKS, len(self.requirements))
+        seen = [(r, readings[r.key]) for r in self.requirements if r.key in readings]
+        return any(requirement.margin(found.value) + z * found.se < 0.0 for requirement, found in seen)
 
     def _curve_rows(self, n: int, analysed: int, look: str, answers: dict[int, CellAnswers]) -> list[dict[str, object]]:
         rows = []
         needed = {requirement.key: requirement for requirement in self.requirements}
         for i, condition in enumerate(self.question.conditions):
-            shown = dict(answers[i])
+            shown = dict(answers.get(i, {}))
             if "width" in shown:
                 width = shown["width"]
                 e = width.estimate

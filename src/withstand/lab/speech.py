@@ -4,21 +4,21 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 
-from withstand.departures.base import Departure
 from withstand.departures.shape import HeavyTails
-from withstand.judgement.headline import round_for_speech
+from withstand.judgement.headline import NOTHING, round_for_speech
 from withstand.lab.plan import Axis
 
 _DIGITS = 3
 
 
-def spoken(departure: Departure, severity: float) -> str:
+def spoken(axis: Axis, severity: float) -> str:
     """A severity as a person would say it, to three digits: those of the degrees of freedom for heavy tails.
 
-    Where the assumption holds, nothing is wrong.
+    Where the assumption holds, nothing is wrong, unless companions act.
     """
-    if severity == departure.neutral:
-        return "nothing wrong"
+    departure = axis.departure
+    if severity == departure.neutral and not axis.companions:
+        return NOTHING
     if isinstance(departure, HeavyTails) and severity > 0.0:
         return departure.label(1.0 / round_for_speech(1.0 / severity, _DIGITS))
     return departure.label(round_for_speech(severity, _DIGITS))

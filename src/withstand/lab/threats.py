@@ -130,7 +130,7 @@ class Assessment:
         return -1 if severity < axis.departure.neutral else 1
 
     def _cell(self, axis: Axis, severity: float, procedure: int, focus: int) -> Cell | None:
-        if severity == axis.departure.neutral:
+        if severity == axis.departure.neutral and not axis.companions:
             return self.cells.get(("", 0.0, procedure, focus))
         return self.cells.get((axis.identity, severity, procedure, focus))
 
@@ -191,7 +191,7 @@ def ranking_frame(assessment: Assessment, threats: Sequence[Threatened]) -> pd.D
                 "procedure": threat.procedure,
                 "focus": threat.focus,
                 "worst_severity": worst.severity,
-                "worst_label": spoken(one.axis.departure, worst.severity),
+                "worst_label": spoken(one.axis, worst.severity),
                 "coverage_there": worst.share,
                 "shift_there": worst.shift,
                 "method": "exact" if worst.exact else "simulated",

@@ -49,25 +49,28 @@ class Lines:
         self.axes = {axis.identity: axis for axis in evidence.grid.possible}
         self.cells: dict[Line, dict[float, Cell]] = {}
         self.judged: dict[Line, dict[float, Judgement]] = {}
-        self.neutral: dict[tuple[int, int], tuple[Cell, Judgement | None]] = {}
-        for cell in evidence.cells:
-            where, judgement = (cell.procedure_index, cell.focus_index), evidence.verdict(cell)
+        self.neutral: dict[tuple[str, int, int], Judgement] = {}
+        verdicts = {cell: verdict for cell in evidence.cells if (verdict := evidence.verdict(cell)) is not None}
+        for cell, verdict in verdicts.items():
             axis = cell.spot.axis
-            if axis is None:
-                self.neutral[where] = (cell, judgement)
-                continue
-            if cell.spot.severity == axis.departure.neutral:
-                continue
-            line = Line(axis.identity, *where, 1 if cell.spot.severity > axis.departure.neutral else -1)
-            self.cells.setdefault(line, {})[cell.spot.severity] = cell
-            if judgement is not None:
-                self.add(line, cell.spot.severity, judgement)
+            if axis is None or cell.spot.severity == axis.departure.neutral:
+                self.neutral["" if axis is None else axis.identity, cell.procedure_index, cell.focus_index] = verdict
+        for cell in evidence.cells:
+            axis = cell.spot.axis
+            if axis is not None and cell.spot.severity != axis.departure.neutral:
+                side = 1 if cell.spot.severity > axis.departure.neutral else -1
+                line = Line(axis.identity, cell.procedure_index, cell.focus_index, side)
+                self.cells.setdefault(line, {})[cell.spot.severity] = cell
+                if cell in verdicts:
+                    self.add(line, cell.spot.severity, verdicts[cell])
 
     def add(self, line: Line, severity: float, judgement: Judgement) -> None:
         """Note a verdict."""
         if line not in self.judged:
-            base = self.neutral[line.procedure, line.focus][1]
-            self.judged[line] = {} if base is None else {self.axes[line.axis].departure.neutral: base}
+            axis = self.axes[line.axis]
+            # Without companions the departure at neutral is the baseline; with them, they still act.
+            base = self.neutral.get((axis.identity if axis.companions else "", line.procedure, line.focus))
+            self.judged[line] = {} if base is None else {axis.departure.neutral: base}
         self.judged[line][severity] = judgement
 
     def exact(self, line: Line) -> bool:
@@ -100,7 +103,7 @@ def find_tippings(evidence: Evidence, bench: Bench, leading: Sequence[int | None
 def _root(lines: Lines, line: Line) -> Tipping:
     """The tipping severity of an exact line."""
     grid, axis, judged = lines.evidence.grid, lines.axes[line.axis], lines.judged[line]
-    pattern = lines.neutral[line.procedure, line.focus][0]
+    pattern = next(iter(lines.cells[line].values()))
 
     def margin(severity: float) -> float:
         if severity not in judged:

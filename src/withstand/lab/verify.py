@@ -45,14 +45,21 @@ def comparisons(evidence: Evidence) -> list[Comparison]:
 
     Notes
     -----
-    The standard error of a share is that of its exact value, so that a share of 0 or 1 among replicates has one too.
+    The standard error of a share is that of its exact value, so that a share of 0 or 1 among replicates has one too. Where the
+    law of the errors has no fourth moment, the Monte Carlo error of an SD does not exist, and only shares are compared.
     """
     found = []
+    wild: dict[int, bool] = {}
     for cell, answers in evidence.exact.items():
         tally = evidence.tallies.get(cell)
         if tally is None:
             continue
-        for name, estimate in measure(tally, list(answers), evidence.grid.study.error_sd).items():
+        world = cell.spot.world
+        if world not in wild:
+            law = evidence.grid.world(cell.spot).on(evidence.grid.study.design).law
+            wild[world] = law is not None and math.isinf(law.kurtosis)
+        names = [name for name in answers if name in COUNTED or not wild[world]]
+        for name, estimate in measure(tally, names, evidence.grid.study.error_sd).items():
             exact = answers[name].estimate.value
             se = _error(name, exact, tally) if name in COUNTED else estimate.mc_se
             difference = estimate.value - exact

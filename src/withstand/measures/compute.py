@@ -10,6 +10,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from functools import cache
 
 import numpy as np
 from scipy import stats
@@ -220,10 +221,16 @@ def _spread(gradient: Floats, covariance: Floats) -> float:
     return math.sqrt(max(float(gradient @ covariance @ gradient), 0.0))
 
 
+@cache
+def _quantile(df: int) -> float:
+    """Student's t; kept, since all measures of a look ask for the same one."""
+    return float(stats.t.isf((1.0 - CONFIDENCE) / 2.0, df))
+
+
 def _interval(name: str, value: float, se: float, tally: Tally) -> tuple[float, float]:
     independent = tally.units == tally.replicates
     if name in COUNTED and independent:
         return clopper_pearson(round(value * tally.replicates), tally.replicates, CONFIDENCE)
-    reach = float(stats.t.isf((1.0 - CONFIDENCE) / 2.0, tally.units - 1)) * se
+    reach = _quantile(tally.units - 1) * se
     bounds = (0.0, 1.0) if name in COUNTED else (-math.inf, math.inf)
     return max(value - reach, bounds[0]), min(value + reach, bounds[1])

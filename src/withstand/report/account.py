@@ -40,6 +40,8 @@ def tolerance_sentence(view: View) -> str:
 def effort_sentence(view: View) -> str:
     """How sure the numbers are."""
     run = view.outcome.provenance
+    if run.get("simulated_cells") == 0 and run.get("exact_cells") is not None:
+        return f"{plural(int(run['exact_cells']), 'cell')} exact, none simulated."
     parts = []
     if run.get("exact_cells") is not None and run.get("simulated_cells") is not None:
         parts.append(f"{plural(int(run['exact_cells']), 'cell')} exact, {count(run['simulated_cells'])} simulated")

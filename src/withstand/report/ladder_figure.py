@@ -69,7 +69,7 @@ def _series(view: View, axis: Axis, procedure: str, focus: str, measure: str) ->
     found = []
     for place, severity in enumerate(_rungs(view, axis)):
         reading = view.reading(axis, severity, procedure, focus, measure)
-        if reading is None and severity == view.neutral(axis):
+        if reading is None and severity == view.neutral(axis) and not axis.stack:
             reading = view.baseline(procedure, focus, measure)
         if reading is not None:
             found.append((float(place), reading))
@@ -117,7 +117,9 @@ def _draw_panel(
         _draw_line(panel, places, heights, [reading for _, reading in series], colours[procedure])
     _mark_allowed(panel, view, axis, focus)
     panel.set_xlim(-0.2, last + 0.25)
-    panel.set_xticks(range(last + 1), ["none" if severity == neutral else words.figure(severity) for severity in rungs])
+    panel.set_xticks(
+        range(last + 1), ["none" if severity == neutral and not axis.stack else words.figure(severity) for severity in rungs]
+    )
     panel.set_xlabel(style.drawable(words.axis, 40), labelpad=1.5)
     panel.set_title(style.drawable(view.name(axis), 31, 2), pad=6.0)
 

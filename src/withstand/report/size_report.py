@@ -152,7 +152,9 @@ def size_markdown(answer: SizeAnswer, extra: Sequence[str] = ()) -> str:
     lines = [
         f"# How many rows: {_plain(answer.title)}",
         "",
-        f"Focus: {_plain(answer.focus)}. Asked: {_plain(listing(answer.asked))}.",
+        f"Focus: {_plain(answer.focus)}. Asked: {_plain(listing(answer.bounds))}.",
+        "",
+        f"{'In each of these worlds' if len(answer.worlds) > 1 else 'World'}: {_plain('; '.join(answer.worlds))}.",
         "",
     ]
     lines += [f"- {_plain(sentence)}" for sentence in answer.sentences]
@@ -172,7 +174,7 @@ def size_markdown(answer: SizeAnswer, extra: Sequence[str] = ()) -> str:
                 lines.append(f"| {_plain(size.procedure)} | {count(n)} | {' | '.join(cells)} | {method} |")
         lines += [
             "",
-            "Each number is that of the worst world asked about; ± is the half width of its 95 % Monte Carlo interval.",
+            "Each number is that of the worst world looked at there; ± is the half width of its 95 % Monte Carlo interval.",
         ]
     return "\n".join(lines) + "\n"
 

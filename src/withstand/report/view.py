@@ -83,8 +83,9 @@ class View:
 
     @cached_property
     def procedures(self) -> list[str]:
-        """In the order they were named; the first is the user's own."""
-        return [str(name) for name in unique(self.outcome.measures["procedure"])]
+        """In the order they were named; the first is the user's own. Those that were planned, where nothing is measured yet."""
+        measured = [str(name) for name in unique(self.outcome.measures["procedure"])]
+        return measured or list(self.outcome.provenance.get("procedures", []))
 
     @cached_property
     def foci(self) -> list[str]:
@@ -170,8 +171,10 @@ class View:
         return any(self.baseline(procedure, focus, measure) is not None for measure in ("coverage", "size"))
 
     def leading(self, focus: str) -> str:
-        """The first procedure that answers for the focal quantity; empty where there is none."""
-        return next((name for name in self.procedures if self.has_answer(name, focus)), "")
+        """The first procedure that answers for the focal quantity, or is to; empty where there is none."""
+        answered = (name for name in self.procedures if self.has_answer(name, focus))
+        table = self.outcome.tipping
+        return next(answered, next(iter(table.loc[table["focus"] == focus, "procedure"]), ""))
 
     def ranked(self, focus: str) -> list[Axis]:
         """Every axis, what to worry about first coming first."""

@@ -86,7 +86,7 @@ def turning(view: View, axis: Axis, procedure: str, focus: str) -> str:
     if row is not None:
         tipping, last, first = float(row.tipping), float(row.last_holds), float(row.first_gives)
     neutral = view.neutral(axis)
-    if first == neutral:
+    if first == neutral and not axis.stack:
         return "gives even when nothing is wrong"
     # Below neutral the departure is turned round, and severities fall as it gets worse.
     turned = next((s for s in (first, tipping, last) if math.isfinite(s)), neutral) < neutral
@@ -101,6 +101,8 @@ def turning(view: View, axis: Axis, procedure: str, focus: str) -> str:
         return "not judged"
     if not math.isfinite(last):
         return "unsettled"
+    if last == neutral and not axis.stack:
+        return "unsettled from the least tried on"
     farthest = last <= ladder[0][0] if turned else last >= ladder[-1][0]
     return f"holds{down} to {words.label(last)}, {'the most tried' if farthest else 'unsettled beyond'}"
 
@@ -135,7 +137,7 @@ def _covers(view: View, axis: Axis, procedure: str, focus: str, words: SeverityW
     severity = view.worst(axis, focus) if row is None else float(row.worst_severity)
     label = words.label(severity) if row is None else str(row.worst_label)
     bounds = view.bounds or ()
-    where = "with nothing wrong" if severity == view.neutral(axis) else f"at {label}"
+    where = "with nothing wrong" if severity == view.neutral(axis) and not axis.stack else f"at {label}"
     reading = _reading(view, axis, severity, procedure, focus, "coverage")
     if reading is not None:
         judged = view.verdict(axis, severity, procedure, focus)
@@ -145,12 +147,12 @@ def _covers(view: View, axis: Axis, procedure: str, focus: str, words: SeverityW
         return f"{short_share(reading, bounds)} % {where}{' (exact)' if reading.exact else ''}{besides}"
     if row is None or math.isnan(row.coverage_there):
         size = _reading(view, axis, severity, procedure, focus, "size")
-        return "no interval" if size is None else f"size {share(size)} {where}"
+        return "takes simulation" if size is None else f"size {share(size)} {where}"
     return f"{percent(float(row.coverage_there), bounds)} % {where}{' (exact)' if row.method == 'exact' else ''}"
 
 
 def _reading(view: View, axis: Axis, severity: float, procedure: str, focus: str, measure: str) -> Reading | None:
-    if severity == view.neutral(axis):
+    if severity == view.neutral(axis) and not axis.stack:
         return view.baseline(procedure, focus, measure)
     return view.reading(axis, severity, procedure, focus, measure)
 

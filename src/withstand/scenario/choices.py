@@ -38,7 +38,7 @@ def chosen_axes(given: Sequence[Departure | str | Sequence[Departure]], study: S
         )
     axes = []
     for entry in given:
-        stack = [entry] if isinstance(entry, str | Departure) else list(entry)
+        stack = list(entry) if isinstance(entry, Sequence) and not isinstance(entry, str) else [entry]
         if not stack:
             raise ScenarioError("a stack is empty", where="departures", remedy="Leave it out.")
         first, *companions = (fitting(_made(one), study) for one in stack)

@@ -24,7 +24,7 @@ from withstand.departures import (
 )
 from withstand.departures.along import FITTED
 from withstand.lab.plan import Axis
-from withstand.procedures.base import REGISTRY, Procedure, make_procedure
+from withstand.procedures.base import Procedure, make_procedure
 from withstand.scenario.choices import bound
 from withstand.study.study import Study
 
@@ -45,7 +45,9 @@ def default_axes(study: Study) -> tuple[tuple[Axis, ...], tuple[str, ...]]:
     tuple of Axis, tuple of str
         The departures, and notices of what was left out and why.
     """
-    axes, left_out, notices = [], [], []
+    axes: list[Axis] = []
+    left_out: list[str] = []
+    notices: list[str] = []
     for departure in _candidates(study):
         reason = departure.not_applicable(study.design)
         if reason is not None:
@@ -76,12 +78,12 @@ def default_procedures(study: Study) -> tuple[Procedure, ...]:
     wanted = ["ols", "hc3", "hc2-bm"]
     if design.weights is not None:
         wanted.append("known-weights")
-    if design.order is not None:
-        wanted += ["hac", "prais-winsten"]
     if design.groups is not None:
         wanted += ["cr1", "cr2"]
+    elif design.order is not None:
+        wanted += ["hac", "prais-winsten"]
     wanted.append("huber")
-    return tuple(make_procedure(name) for name in wanted if name in REGISTRY)
+    return tuple(make_procedure(name) for name in wanted)
 
 
 def _candidates(study: Study) -> Iterator[Departure]:

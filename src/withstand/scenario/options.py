@@ -75,7 +75,7 @@ def as_written(hint: Any) -> Any:
     """The type of an option as TOML can carry it: any sequence is a list, and a list of texts may be one text."""
     origin, members = get_origin(hint), get_args(hint)
     if origin in (Union, types.UnionType):
-        return Union[tuple(as_written(member) for member in members if member is not type(None))]  # noqa: UP007
+        return Union[tuple(as_written(member) for member in members if member is not type(None))]  # noqa: UP007  # members are known at run time only
     if isinstance(origin, type) and issubclass(origin, Sequence):
         item = members[0]
         return str | list[str] if item is str else list[item]  # type: ignore[valid-type]  # known at run time only

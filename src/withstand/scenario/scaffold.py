@@ -49,7 +49,7 @@ def scaffold(study: Study, plan: Plan, written: Mapping[str, Any]) -> str:
         TOML with comments; loads back to the same study and plan.
     """
     parts = [
-        f"# A scenario for `withstand run`. {study.n} rows, {study.design.p} model columns. Lines that begin with # are comments.",
+        f"# A scenario for `withstand run`. {study.n} rows, {study.design.p} model columns. Lines after # are comments.",
         "",
         f"title = {toml_value(study.name)}",
         "",
@@ -57,9 +57,10 @@ def scaffold(study: Study, plan: Plan, written: Mapping[str, Any]) -> str:
         *_study_lines(study, written),
         "",
         *_comment(
-            "Departures to try, one table each, along a ladder of severities. Remove what you need not fear, change the ladders, or "
-            "remove all of them to have the choice made for you. `withstand list departures` shows every kind with its unit. "
-            'A line such as  with = [{ kind = "skew", severity = 1 }]  adds departures that act at the same time.'
+            "Departures to try, one table each, along a ladder of severities. Remove what you need not fear, change the "
+            "ladders, or remove all of them to have the choice made for you. `withstand list departures` shows every kind "
+            "with its unit. A line such as "
+            'with = [{ kind = "skew", severity = 1 }] adds departures that act at the same time.'
         ),
         *(line for axis in plan.axes for line in _departure_lines(axis.departure)),
         "",
@@ -105,7 +106,8 @@ def _departure_lines(departure: Departure) -> list[str]:
     options = {
         option.name: getattr(departure, option.name)
         for option in fields(departure)
-        if option.name not in FROM_FOCUS | {"severity"} and getattr(departure, option.name) != option.default
+        if option.name not in FROM_FOCUS | {"severity"}
+        and (option.name == "along" or getattr(departure, option.name) != option.default)
     }
     lines = ["", "[[departure]]", f"kind = {toml_value(departure.kind)}   # {departure.title}"]
     lines += [f"{name} = {toml_value(value)}" for name, value in options.items()]

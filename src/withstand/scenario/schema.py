@@ -65,7 +65,7 @@ def _companion_models() -> list[type[Part]]:
 
 
 def _departure_models() -> list[type[Part]]:
-    companions = list[tagged_union(_companion_models(), "kind")]  # type: ignore[misc]  # a type known at run time only
+    companions = list[tagged_union(_companion_models(), "kind")]  # type: ignore[misc, valid-type]  # known at run time only
     more: dict[str, Any] = {
         "companions": (companions, Field(default=[], alias="with", description="Further departures that act all the while."))
     }

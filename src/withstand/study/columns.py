@@ -6,14 +6,14 @@ Rows are laid out so that a longer layout begins with the shorter one: adding ro
 from __future__ import annotations
 
 from abc import ABC, abstractmethod
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 
 import numpy as np
 from scipy import stats
 
 from withstand.errors import ScenarioError, nearest
-from withstand.study.design import Floats, Ints
+from withstand.study.design import Floats
 
 MOST_CELLS = 2000
 """Largest number of cells of a factorial crossing."""
@@ -246,43 +246,6 @@ class Drawn(PlannedColumn):
             count = self.high - self.low + 1.0
             return np.asarray(self.low + np.minimum(np.floor(places * count), count - 1.0))
         return np.asarray(self.low + (self.high - self.low) * places)
-
-
-def crossing(sizes: Sequence[int]) -> Ints:
-    """Cells of a factorial crossing in an order of which every beginning is balanced in every factor.
-
-    Parameters
-    ----------
-    sizes : sequence of int
-        Levels of each factor.
-
-    Returns
-    -------
-    ndarray of shape (cells, factors)
-        Level indices. Each next cell is the first, in reading order, whose levels have been used least so far.
-    """
-    cells = np.indices(tuple(sizes)).reshape(len(sizes), -1).T
-    used = [np.zeros(size) for size in sizes]
-    left = np.ones(len(cells), dtype=bool)
-    order = np.empty(len(cells), dtype=np.int64)
-    for place in range(len(cells)):
-        burden = sum(used[j][cells[:, j]] * sizes[j] for j in range(len(sizes)))
-        chosen = int(np.argmin(np.where(left, burden, np.inf)))
-        order[place] = chosen
-        left[chosen] = False
-        for j in range(len(sizes)):
-            used[j][cells[chosen, j]] += 1.0
-    return np.asarray(cells[order], dtype=np.int64)
-
-
-def spread_evenly(probabilities: Floats, n: int) -> Ints:
-    """Codes (n,) with counts as near to the shares as can be at every length: the level most behind its share comes next."""
-    counts = np.zeros(len(probabilities))
-    codes = np.empty(n, dtype=np.int64)
-    for i in range(n):
-        codes[i] = int(np.argmax(probabilities * (i + 1) - counts))
-        counts[codes[i]] += 1.0
-    return codes
 
 
 def _where(name: str, key: str) -> str:

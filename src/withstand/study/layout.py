@@ -10,6 +10,7 @@ import numpy as np
 import pandas as pd
 
 from withstand.errors import ScenarioError, nearest
+from withstand.study.balance import crossing, spread_evenly
 from withstand.study.columns import (
     MOST_CELLS,
     Blocks,
@@ -18,8 +19,6 @@ from withstand.study.columns import (
     Levels,
     PlannedColumn,
     Shares,
-    crossing,
-    spread_evenly,
 )
 from withstand.study.design import Floats, Ints
 
