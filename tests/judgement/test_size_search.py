@@ -120,6 +120,18 @@ def test_what_was_not_read_where_others_fail_does_not_decide(noise):
             assert found.n == truth
 
 
+def test_what_never_comes_right_is_named_though_others_were_not_read():
+    bias = Requirement("bias", "bias_in_sd", low=-0.4, high=0.4)
+
+    def judge(n):
+        seen = {"power": Reading(0.5)} if n > 8 else {"power": Reading(0.5), "bias": Reading(0.0)}
+        return SizePoint(n, seen)
+
+    found = SizeSearch([bias, POWER], judge, judge, UP_TO_5000).run()
+    assert found.n is None
+    assert found.binding == "power"
+
+
 def test_crossings_of_a_smoothed_curve():
     n = np.array([10.0, 20.0, 40.0, 80.0])
     # A line in 1/n through zero at 1/n = 1/30, without error.

@@ -9,6 +9,8 @@ from withstand.departures import Clusters, Curvature, Fan, HeavyTails, LevelSpre
 from withstand.departures.world import World
 from withstand.errors import InputError, ScenarioError
 from withstand.judgement.tolerance import Tolerance
+from withstand.lab.plan import Axis
+from withstand.lab.size_feared import feared_worlds
 from withstand.lab.size_plan import Effort, Targets
 from withstand.lab.size_question import noise_seed
 from withstand.lab.sizing import size_study
@@ -200,7 +202,7 @@ def test_not_met_up_to_the_largest():
     effort = Effort(largest=64)
     size = size_study(lamp(effect={"lamp": 0.01}), procedures("ols"), targets=Targets(power=0.9), effort=effort).sizes[0]
     assert size.n is None
-    assert "not met up to 64 rows, where power is 0.0" in size.reason
+    assert "not met up to 64 rows: power at least 0.9 when nothing is wrong is asked, and there it is 0.05" in size.reason
 
 
 def test_a_pilot_carries_its_range_through():
@@ -259,6 +261,23 @@ def test_what_cannot_be_asked_is_refused_with_the_remedy(make, where, words):
     assert words in str(caught.value)
     if where:
         assert caught.value.where == where
+
+
+def test_worlds_as_far_as_the_residuals_allow():
+    rng = np.random.default_rng(6)
+    x = rng.uniform(0, 1, 60)
+    frame = pd.DataFrame({"x": x, "y": x + rng.normal(size=60)})
+    study = Study.from_frame(frame, "y ~ x", effect={"x": 1.2})
+    axes = (Axis(Fan((1.5, 3.0, 40.0), along="x")),)
+    worlds = feared_worlds(study, axes, procedures("hc3"))
+    severities = [severity for one in worlds for _, severity in one.stack]
+    # The spread is even; that it grows forty times is not what these residuals allow.
+    assert 1.0 < max(severities) < 40.0
+    answer = size_study(study, procedures("hc3"), worlds, targets=Targets(power=0.8))
+    assert answer.n >= 60
+    # A plan has no residuals: its ladder is taken as it is.
+    ladder = feared_worlds(lamp(), (Axis(Fan((1.5, 3.0), along="lamp")),), procedures("hc3"))
+    assert [one.stack[0][1] for one in ladder] == [1.5, 3.0]
 
 
 def test_the_record_is_plain():

@@ -213,8 +213,8 @@ def test_gls_with_known_correlation(name, rho):
     ids=lambda x: x.identity if hasattr(x, "identity") else "",
 )
 def test_m_estimates(procedure, norm):
-    """statsmodels' RLM run until its coefficients settle. Where the fit is a failure here, RLM's own scale collapses or it goes
-    round and round."""
+    """statsmodels' RLM run until its coefficients settle. Where the fit is a failure here, RLM's own scale collapses, or it
+    needs more than the 100 rounds that are given here."""
     compared, failures = 0, 0
     for design, errors in data_sets():
         fits = fits_of(procedure, design, [slope(design), mean_at(design), two_slopes(design)], errors)
@@ -226,7 +226,7 @@ def test_m_estimates(procedure, norm):
                 model = sm.RLM(y, X, M=norm).fit(conv="coefs", tol=1e-13, maxiter=1000)
             if fits[0][1].failed[b]:
                 collapsed = model.scale < 1e-8 * np.std(y)
-                assert collapsed or model.fit_history["iteration"] >= 1000
+                assert collapsed or model.fit_history["iteration"] > 100
                 failures += 1
                 continue
             for focus, fit in fits:

@@ -46,8 +46,12 @@ def test_the_curve_shows_the_worst_world(exact):
         ]
         assert row.value == same["value"].min()
         looked_at.append(len(same))
+        assert len(same) == 2 or row.value < 0.9
     # Where one world fails the other need not be looked at; at the answer both are.
     assert looked_at[-1] == 2
+    coverage = worst_curve(exact, "ols", "coverage")
+    for n in coverage["n"]:
+        assert (exact.curve[(exact.curve["n"] == n) & (exact.curve["procedure"] == "ols")]["world"]).nunique() == 2
     assert shown_measures(exact) == ["coverage", "power"]
 
 

@@ -14,7 +14,7 @@ import numpy as np
 from scipy import stats
 
 from withstand.judgement.crossing import crossings
-from withstand.judgement.size_points import LOOKS, FoundSize, Reading, Requirement, SizePoint, Sizes
+from withstand.judgement.size_points import LOOKS, FoundSize, Requirement, SizePoint, Sizes
 
 FINE = 1.06
 """Bisection of simulated margins ends when the ends of the bracket are within this ratio."""
@@ -184,8 +184,8 @@ class SizeSearch:
         looks = len(points)
         unread = [place for place, point in enumerate(points) if requirement.key not in point.readings]
         points = points[unread[-1] + 1 :] if unread else points
-        first = points[0].readings[requirement.key] if points else Reading(math.inf)
-        if unread and requirement.margin(first.value) >= self._z(looks) * first.se:
+        first = points[0].readings[requirement.key] if points else None
+        if unread and (first is None or requirement.margin(first.value) >= self._z(looks) * first.se):
             # Others failed where it was not read, and it is met beyond: it asks for no more rows than they do.
             return (float(self._sizes.smallest),) * 3
         n = np.array([point.n for point in points], dtype=float)

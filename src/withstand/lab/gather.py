@@ -6,6 +6,7 @@ from collections.abc import Callable, Iterator, Mapping, Sequence
 from concurrent.futures import Executor
 from contextlib import closing, contextmanager
 from dataclasses import dataclass, field
+from functools import cached_property
 from pathlib import Path
 
 from withstand.engine.block import CellKey
@@ -58,17 +59,22 @@ class Evidence:
 
     Parameters
     ----------
-    exact, simulated : mapping of Cell to CellAnswers
-        Answers by route; a cell may have both, one in part, or neither.
+    exact : mapping of Cell to CellAnswers
+        Exact answers; a cell may have some, all or none.
     tallies : mapping of Cell to Tally
-        What the simulated answers rest on.
+        What was simulated.
     """
 
     grid: Grid
     cells: tuple[Cell, ...]
     exact: Mapping[Cell, CellAnswers]
-    simulated: Mapping[Cell, CellAnswers]
     tallies: Mapping[Cell, Tally]
+
+    @cached_property
+    def simulated(self) -> Mapping[Cell, CellAnswers]:
+        """Simulated answers of the tallied cells; worked out when first asked for, since verdicts do not need them."""
+        known = {(cell.procedure_index, cell.focus_index): self.exact[cell] for cell in self.exact if cell.spot.axis is None}
+        return simulated_answers(self.tallies, known, self.grid.study.error_sd)
 
     def answers(self, cell: Cell) -> CellAnswers:
         """The answers of a cell, exact where they exist, in the order of the tables."""
@@ -137,12 +143,10 @@ def gather(grid: Grid, bench: Bench, settled: Settled = verdicts_settled) -> Evi
     """
     cells = tuple(grid.cells)
     exact = exact_answers(grid, cells) if grid.plan.method == "auto" else {}
-    known = {(cell.procedure_index, cell.focus_index): exact[cell] for cell in exact if cell.spot.axis is None}
     runner = bench.runner(grid)
 
     def so_far(some: Sequence[Cell]) -> Evidence:
-        tallies = tallies_of(runner, some)
-        return Evidence(grid, cells, exact, simulated_answers(tallies, known, grid.study.error_sd), tallies)
+        return Evidence(grid, cells, exact, tallies_of(runner, some))
 
     simulate = [cell for cell in cells if bench.effort.verify or cell not in exact or not complete(cell, exact[cell])]
     if bench.effort.simulate:

@@ -65,4 +65,4 @@ def _exactly(grid: Grid, cells: Iterable[Cell], known: Evidence | None = None) -
     exact = {} if known is None else dict(known.exact)
     if grid.plan.method == "auto":
         exact |= exact_answers(grid, [cell for cell in wanted if cell.spot.axis is None or cell not in exact])
-    return Evidence(grid, tuple(wanted), exact, {}, {})
+    return Evidence(grid, tuple(wanted), exact, {})

@@ -11,10 +11,12 @@ from scipy import stats
 from withstand.judgement.findings import Aspect
 from withstand.judgement.limit import Limit, limit_of
 from withstand.judgement.size_points import Requirement
+from withstand.lab.size_plan import Condition
 from withstand.lab.size_question import SizeQuestion
 from withstand.procedures.base import REGISTRY, Procedure, make_procedure
 from withstand.study.focus import FocusKind
 from withstand.study.growth import Extend, Stack
+from withstand.study.study import Study
 
 _DRAWN = 0.002
 """A limit read off drawn tables counts as outside by more than this: however large, they have a little spread of their own."""
@@ -60,7 +62,9 @@ class Limits:
         # Blocks in the model make columns as rows are added: no limit is known for those.
         same = {study.design.names for study in studies} == {question.study.design.names}
         self._known = [
-            limit_of(studies, procedure, question.focus, condition.world, anything) if same else None
+            limit_of(studies, procedure, question.focus, condition.world, anything)
+            if same and _buildable(condition, studies)
+            else None
             for condition in question.conditions
         ]
 
@@ -104,6 +108,11 @@ class Limits:
                     else ""
                 )
         return ""
+
+
+def _buildable(condition: Condition, studies: Sequence[Study]) -> bool:
+    departures = [departure for departure, _ in condition.world.stack]
+    return not any(departure.not_applicable(study.design) for departure in departures for study in studies)
 
 
 def passing_procedures(question: SizeQuestion, requirements: Sequence[Requirement]) -> tuple[str, ...]:

@@ -16,7 +16,7 @@ from withstand.lab.frames import CellAnswers
 from withstand.lab.gather import Bench, Evidence, gather
 from withstand.lab.gather import Effort as Means
 from withstand.lab.grid import Cell
-from withstand.lab.plan import Axis, Plan
+from withstand.lab.plan import Plan
 from withstand.lab.progress import Progress, Silent
 from withstand.lab.size_plan import Condition, Effort
 from withstand.lab.size_tables import TABLES, TableAverage, TableGrid
@@ -56,16 +56,18 @@ class Look:
 
     def grid(self, study: Study, seed: int) -> TableGrid:
         """The worlds laid out on a study that has one focal quantity."""
+        points = [point for condition in self._conditions.values() if (point := condition.point) is not None]
+        axes = {axis.identity: axis for axis, _ in points}
         # The tolerance is in the requirements; the plan's own is not looked at.
         plan = Plan(
-            axes_through(list(self._conditions.values())),
+            tuple(axes.values()),
             (self.procedure,),
             seed=seed,
             repetitions=self.effort.repetitions,
             most=max(self.effort.most, self.effort.repetitions),
             method="auto" if self.effort.method == "auto" else "simulated",
         )
-        return TableGrid(study, plan)
+        return TableGrid(study, plan, tuple((axes[axis.identity], severity) for axis, severity in points))
 
     def only(self, worlds: Collection[int]) -> Look:
         """The same at some of the worlds, by number; they keep their numbers."""
@@ -141,21 +143,6 @@ class Look:
         chance = spending(self.effort.delta, look) / (LOOKS * len(self.requirements))
         margin, reach = requirement.margin(seen.value), float(stats.norm.isf(chance / 2.0)) * seen.se
         return 1 if margin >= reach else -1 if margin < -reach else 0
-
-
-def axes_through(conditions: Sequence[Condition]) -> tuple[Axis, ...]:
-    """Axes that visit every world but the one in which nothing is wrong; severities of one departure share an axis."""
-    axes: dict[str, Axis] = {}
-    for condition in conditions:
-        axis = condition.axis
-        if axis is None:
-            continue
-        before = axes.get(axis.identity)
-        if before is not None:
-            ladder = (*before.departure.ladder, *axis.departure.ladder)
-            axis = replace(before, departure=replace(before.departure, severity=ladder))
-        axes[axis.identity] = axis
-    return tuple(axes.values())
 
 
 def reading(answers: CellAnswers, name: str) -> Reading:

@@ -122,12 +122,12 @@ class Condition:
         return " + ".join(f"{departure.name}, {departure.label(severity)}" for departure, severity in self.world.stack)
 
     @property
-    def axis(self) -> Axis | None:
-        """The world as an axis with one severity."""
+    def point(self) -> tuple[Axis, float] | None:
+        """The world as an axis and the severity on it; None where nothing is wrong."""
         if self.world.baseline:
             return None
         (first, severity), *companions = self.world.stack
-        return Axis(replace(first, severity=(severity,)), tuple(companions))
+        return Axis(first, tuple(companions)), severity
 
     def bound_to(self, focus: Focus) -> Condition:
         """The same with the worst fan bound to the focal quantity."""

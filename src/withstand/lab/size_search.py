@@ -83,7 +83,7 @@ class ProcedureSearch:
         last = next(point for point in reversed(found.points) if binding.key in point.readings)
         return replace(
             size,
-            reason=f"not met up to {last.n} rows, where {binding.measure.replace('_', ' ')} is "
+            reason=f"not met up to {last.n} rows: {binding.words} is asked, and there it is "
             f"{last.readings[binding.key].value:.4g}; ask for more with --largest",
         )
 

@@ -89,7 +89,7 @@ class TableAverage:
 
     def _on(self, design: Design) -> dict[str, CellAnswers]:
         grid = self._grid
-        here = TableGrid(replace(grid.study, design=design, rows=FixedRows(design)), grid.plan)
+        here = replace(grid, study=replace(grid.study, design=design, rows=FixedRows(design)))
         if here.impossible:
             return dict.fromkeys(self._values, _REFUSED)
         cells = [cell for cell in here.cells if here.place(cell) in self._values]

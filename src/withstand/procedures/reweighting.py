@@ -15,7 +15,12 @@ from withstand.study.design import Floats, Ints
 NORMAL_MAD = 0.6744897501960817
 """Median absolute deviation of a standard normal variable, the 0.6745 of the textbooks."""
 
-_ROUNDS = 200
+_ROUNDS = 100
+"""Rounds of reweighting before a replicate counts as failed."""
+
+_ROUNDS_NEWTON = 40
+"""Rounds with Newton's method in between. A replicate that needs more is going in circles, and starts again without."""
+
 _SETTLED = 1e-9
 """The iteration ends when no orthonormal coordinate moves by more than this many scales, about as many standard errors."""
 
@@ -97,21 +102,21 @@ class Reweighting:
         failed : ndarray of bool, shape (B,)
             No convergence, no solution, or a scale that has collapsed.
         """
-        step, failed = self._iterate(_NEAR)
+        step, failed = self._iterate(_NEAR, _ROUNDS_NEWTON)
         again = np.flatnonzero(failed)
         if again.size:
-            step[again], failed[again] = Reweighting(self.score, self.products, self.first[again])._iterate(0.0)
+            step[again], failed[again] = Reweighting(self.score, self.products, self.first[again])._iterate(0.0, _ROUNDS)
         return step, failed
 
-    def _iterate(self, nearness: float) -> tuple[Floats, Flags]:
-        """One run, with Newton's method for steps below `nearness`; replicates that have settled leave."""
+    def _iterate(self, nearness: float, rounds: int) -> tuple[Floats, Flags]:
+        """So many rounds, with Newton's method for steps below `nearness`; replicates that have settled leave."""
         B, p = self.first.shape[0], self.products.Q.shape[1]
         step, failed = np.zeros((B, p)), np.zeros(B, dtype=bool)
         least = _COLLAPSED * mad(np.abs(self.first))
         going, residuals = np.arange(B), self.first.copy()
         near, bound = np.full(B, nearness), np.full(B, np.inf)
         size = bound
-        for _ in range(_ROUNDS):
+        for _ in range(rounds):
             newton = size < near
             change, scale, lost, astray = self._change(residuals, newton, least[going])
             move = np.abs(change).max(axis=1) / scale

@@ -16,7 +16,7 @@ from withstand.report.harm_figure import draw_harm, harm_points
 from withstand.report.ladder_figure import draw_ladders
 from withstand.report.premium_figure import draw_premium
 from withstand.report.style import own_style
-from withstand.report.view import View
+from withstand.report.view import View, view_of
 
 FIGURES: dict[str, Callable[[View, str], Figure]] = {
     "coverage": lambda view, focus: draw_ladders(view, focus, "coverage"),
@@ -67,7 +67,7 @@ def figure(outcome: Outcome, name: str = "coverage", focus: str | None = None) -
     InputError
         If the figure or the focal quantity is unknown, or the outcome has no numbers for it.
     """
-    view = View(outcome)
+    view = view_of(outcome)
     if name not in FIGURES:
         raise InputError(f"unknown figure '{name}'", where="figure", remedy=nearest(name, FIGURES))
     if focus is not None and focus not in view.foci:

@@ -23,7 +23,7 @@ from withstand.report.tables import (
     verdict_table,
     worry_table,
 )
-from withstand.report.view import View
+from withstand.report.view import View, view_of
 from withstand.report.words import count, listing, number, plural
 
 SAME = 1e-9
@@ -35,7 +35,7 @@ Pictures = Mapping[tuple[str, str], bytes]
 
 def draw_all(outcome: Outcome) -> dict[tuple[str, str], bytes]:
     """Every figure there are numbers for, as SVG, by focus and name."""
-    view = View(outcome)
+    view = view_of(outcome)
     pictures = {}
     for focus in view.foci:
         for name in available(view, focus):
@@ -55,7 +55,7 @@ def page(outcome: Outcome, pictures: Pictures | None = None) -> str:
     pictures : mapping, optional
         From `draw_all`, if they are at hand already.
     """
-    view = View(outcome)
+    view = view_of(outcome)
     drawn = draw_all(outcome) if pictures is None else pictures
     return _environment().get_template("report.html.j2").render(
         title=outcome.title,
@@ -87,7 +87,7 @@ def _environment() -> Environment:
 
 def fragment(outcome: Outcome) -> str:
     """What a notebook shows: the headline and the tables on what to worry about first."""
-    view = View(outcome)
+    view = view_of(outcome)
     tables = [worry_table(view, view.leading(focus), focus) for focus in view.foci if view.leading(focus)]
     return _environment().get_template("fragment.html.j2").render(title=outcome.title, headline=outcome.headline, tables=tables)
 

@@ -10,7 +10,7 @@ from pathlib import Path
 
 from withstand.lab.outcome import Outcome
 from withstand.report.account import baseline_sentence, effort_sentence, rows_sentence, tolerance_sentence
-from withstand.report.view import View
+from withstand.report.view import View, view_of
 from withstand.report.words import percent
 from withstand.report.worry import Worry, worries
 
@@ -40,7 +40,7 @@ def screen(outcome: Outcome, page: Path | None = None) -> str:
     str
         Lines of at most WIDTH columns, ended by a newline.
     """
-    view = View(outcome)
+    view = view_of(outcome)
     lines = [*_wrapped(f"{_one_line(str(outcome.facts.get('name') or outcome.title))}: {rows_sentence(view)}.")]
     if outcome.facts.get("formula"):
         lines += _wrapped(f"Model: {outcome.facts['formula']}")

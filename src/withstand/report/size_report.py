@@ -34,12 +34,17 @@ _HEIGHT = 2.1
 
 
 def worst_curve(answer: SizeAnswer, procedure: str, measure: str) -> pd.DataFrame:
-    """One row an n: the reading with the smallest margin over the worlds, second looks left out."""
+    """One row an n: the reading with the smallest margin over the worlds, second looks left out.
+
+    Where not every world was looked at, because something failed in one, a reading stands only if it fails itself.
+    """
     curve = answer.curve
     chosen = (curve["procedure"] == procedure) & (curve["measure"] == measure) & (curve["look"] == "search")
     asked = np.isfinite(curve["needed_low"]) | np.isfinite(curve["needed_high"])
     rows = curve[chosen & asked].copy()
     rows["margin"] = np.minimum(rows["value"] - rows["needed_low"], rows["needed_high"] - rows["value"])
+    everywhere = rows.groupby("n")["world"].transform("nunique") == len(answer.worlds)
+    rows = rows[everywhere | (rows["margin"] < 0.0)]
     return rows.sort_values("margin").drop_duplicates("n").sort_values("n", ignore_index=True)
 
 
@@ -174,7 +179,8 @@ def size_markdown(answer: SizeAnswer, extra: Sequence[str] = ()) -> str:
                 lines.append(f"| {_plain(size.procedure)} | {count(n)} | {' | '.join(cells)} | {method} |")
         lines += [
             "",
-            "Each number is that of the worst world looked at there; ± is the half width of its 95 % Monte Carlo interval.",
+            "Each number is that of the worst world; ± is the half width of its 95 % Monte Carlo interval. A dash stands where "
+            "something else failed first, and not every world was looked at.",
         ]
     return "\n".join(lines) + "\n"
 

@@ -6,7 +6,7 @@ from withstand.lab.outcome import Outcome
 from withstand.report import account, markdown, prose
 from withstand.report.sources import citations
 from withstand.report.tables import worry_table
-from withstand.report.view import View
+from withstand.report.view import View, view_of
 from withstand.report.words import listing, plural
 from withstand.report.worry import worries
 
@@ -19,7 +19,7 @@ def statement(outcome: Outcome) -> str:
     outcome : Outcome
         What a run found.
     """
-    view = View(outcome)
+    view = view_of(outcome)
     parts = [f"# Statement: {markdown.text(outcome.title)}"]
     paragraph = [_what(view), *(_found(view, focus) for focus in view.foci), _repeat(view)]
     parts.append(" ".join(sentence for sentence in paragraph if sentence))

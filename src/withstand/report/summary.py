@@ -6,7 +6,7 @@ from withstand.lab.outcome import Outcome
 from withstand.report import account, markdown, prose
 from withstand.report.html import provenance_facts
 from withstand.report.tables import failures_table, premium_table, protection_table, verdict_table, worry_table
-from withstand.report.view import View
+from withstand.report.view import View, view_of
 
 
 def summary(outcome: Outcome) -> str:
@@ -17,7 +17,7 @@ def summary(outcome: Outcome) -> str:
     outcome : Outcome
         What a run found.
     """
-    view = View(outcome)
+    view = view_of(outcome)
     parts = [f"# {markdown.text(outcome.title)}"]
     if outcome.headline:
         parts.append(markdown.bullets(outcome.headline))

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Hashable, Iterable, Mapping
 from dataclasses import dataclass
-from functools import cached_property
+from functools import cached_property, lru_cache
 from typing import Any
 
 import pandas as pd
@@ -148,7 +148,7 @@ class View:
         return {axis: sorted(rungs.items()) for axis, rungs in found.items()}
 
     def _of_this_size(self, table: pd.DataFrame) -> Iterable[Any]:
-        return table[table["n"] == self.n].itertuples(index=False)
+        return _rows(table[table["n"] == self.n])
 
     def reading(self, axis: Axis, severity: float, procedure: str, focus: str, measure: str) -> Reading | None:
         """One measure; None where it was not reported."""
@@ -176,35 +176,37 @@ class View:
         table = self.outcome.tipping
         return next(answered, next(iter(table.loc[table["focus"] == focus, "procedure"]), ""))
 
+    @cached_property
+    def _ranks(self) -> dict[tuple[Hashable, ...], Any]:
+        return _first_rows(self.outcome.ranking)
+
+    @cached_property
+    def _tippings(self) -> dict[tuple[Hashable, ...], Any]:
+        return _first_rows(self.outcome.tipping)
+
     def ranked(self, focus: str) -> list[Axis]:
         """Every axis, what to worry about first coming first."""
-        order = [_axis(row) for row in _rows(self.outcome.ranking) if row.focus == focus]
+        order = [axis for axis, _, ranked_focus in self._ranks if ranked_focus == focus]
         return [axis for axis in unique([*order, *self.ladders]) if axis in self.ladders]
 
     def rank(self, axis: Axis, procedure: str, focus: str) -> Any | None:
         """The row of the ranking, as a named tuple; None where there is none."""
-        for row in _rows(self.outcome.ranking):
-            if (_axis(row), row.procedure, row.focus) == (axis, procedure, focus):
-                return row
-        return None
+        return self._ranks.get((axis, procedure, focus))
 
     def tipping(self, axis: Axis, procedure: str, focus: str) -> Any | None:
         """The row of tipping severities, as a named tuple; None where there is none.
 
         Of two rows, one for each direction, the first: that of the worst severity.
         """
-        for row in _rows(self.outcome.tipping):
-            if (_axis(row), row.procedure, row.focus) == (axis, procedure, focus):
-                return row
-        return None
+        return self._tippings.get((axis, procedure, focus))
 
     def worst(self, axis: Axis, focus: str) -> float:
         """The severity to compare procedures at: the worst that the ranking names and the table has, else the last tried."""
-        for row in _rows(self.outcome.ranking):
-            if (_axis(row), row.focus) == (axis, focus):
-                tried = [severity for severity, _ in self.ladders[axis]]
+        tried = [severity for severity, _ in self.ladders[axis]]
+        for (ranked_axis, _, ranked_focus), row in self._ranks.items():
+            if (ranked_axis, ranked_focus) == (axis, focus):
                 return min(tried, key=lambda severity: abs(severity - row.worst_severity))
-        return self.ladders[axis][-1][0]
+        return tried[-1]
 
     def name(self, axis: Axis) -> str:
         """An axis as it is shown to people."""
@@ -228,8 +230,23 @@ def unique(values: Iterable[Any]) -> list[Any]:
     return list(dict.fromkeys(values))
 
 
+@lru_cache(maxsize=1)
+def view_of(outcome: Outcome) -> View:
+    """The view of an outcome; that of the last one asked for is kept, since the files of a report read the same tables."""
+    return View(outcome)
+
+
 def _rows(table: pd.DataFrame) -> Iterable[Any]:
-    return table.itertuples(index=False)
+    # Plain Python values: iterating over packed text columns is many times slower.
+    return table.astype(object).itertuples(index=False)
+
+
+def _first_rows(table: pd.DataFrame) -> dict[tuple[Hashable, ...], Any]:
+    """The first row of each axis, procedure and focal quantity."""
+    found: dict[tuple[Hashable, ...], Any] = {}
+    for row in _rows(table):
+        found.setdefault((_axis(row), row.procedure, row.focus), row)
+    return found
 
 
 def _axis(row: Any) -> Axis:

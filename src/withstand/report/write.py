@@ -11,7 +11,7 @@ from withstand.report.html import page
 from withstand.report.statement import statement
 from withstand.report.store import stored
 from withstand.report.summary import summary
-from withstand.report.view import View
+from withstand.report.view import view_of
 
 PAGE = "report.html"
 SUMMARY = "summary.md"
@@ -39,7 +39,7 @@ def write_report(outcome: Outcome, folder: Path) -> Path:
     InputError
         If the folder cannot be written to.
     """
-    view = View(outcome)
+    view = view_of(outcome)
     pictures: dict[tuple[str, str], bytes] = {}
     files: dict[str, bytes] = dict(stored(outcome))
     for place, focus in enumerate(view.foci, 1):
