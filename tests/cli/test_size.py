@@ -78,7 +78,7 @@ def test_worlds_each_alone_or_together(plan, call):
         4000,
     ]
     told = json.loads(call("size", "two.toml", *options, "--workers", 1, "--json")[1])
-    assert {row["world"] for row in told["curve"]} == {"skew, skewness 1", "outliers, 1 row, 1 row by 3 SD"}
+    assert {row["world"] for row in told["curve"]} == {"skew, skewness 1", "outliers (1 row), 1 row by 3 SD"}
     told = json.loads(call("size", "two.toml", *options, "--together", "--workers", 1, "--json")[1])
     assert len({row["world"] for row in told["curve"]}) == 1
 

@@ -44,9 +44,9 @@ def test_severities_beyond_a_ladder_need_no_permission(study, make_plan):
     ("departures", "told"),
     [
         ([Fan(along="hours"), Fan(along="fitted")], ["hours", "fitted"]),
-        ([Fan(along="hours"), Fan(along="hours", direction="down")], ["hours", "hours, downwards"]),
-        ([Bowtie(along="hours"), Bowtie(along="hours", spindle=True)], ["hours", "hours, spindle"]),
-        ([Outliers(), Outliers(placement="leverage")], ["1 row", "at high leverage, 1 row"]),
+        ([Fan(along="hours"), Fan(along="hours", direction="down")], ["hours", "hours (downwards)"]),
+        ([Bowtie(along="hours"), Bowtie(along="hours", spindle=True)], ["hours", "hours (spindle)"]),
+        ([Outliers(), Outliers(placement="leverage")], ["(1 row)", "at high leverage (1 row)"]),
         ([Outliers(), Skew()], ["", ""]),
         ([Serial(), Serial(step=2.0)], ["", "step=2.0"]),
     ],

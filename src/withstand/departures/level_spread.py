@@ -46,7 +46,7 @@ class LevelSpread(RatioSpread):
     @property
     def name(self) -> str:
         """See Departure."""
-        return f"{super().name}, noisy {', '.join(self.noisy)}" if self.noisy else super().name
+        return f"{super().name} (noisy: {', '.join(self.noisy)})" if self.noisy else super().name
 
     def not_applicable(self, design: Design) -> str | None:
         """See Departure."""

@@ -118,7 +118,7 @@ class Outliers(OutlierDeparture):
         """See Departure."""
         where = "" if self.placement == "random" else " at high leverage"
         how = "" if self.sign == "one-sided" else f", {self.sign} sign"
-        return f"{self.kind}{where}, {self._extent}{how}"
+        return f"{self.kind}{where} ({self._extent}{how})"
 
     @property
     def _extent(self) -> str:

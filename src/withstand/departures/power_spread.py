@@ -43,7 +43,7 @@ class PowerSpread(SpreadDeparture):
 
     def label(self, severity: float) -> str:
         """See Departure."""
-        return f"SD as power {severity:g}"
+        return f"power {severity:g}"
 
     def not_applicable(self, design: Design) -> str | None:
         """See Departure."""

@@ -109,7 +109,7 @@ class Contaminated(LawDeparture):
     @property
     def name(self) -> str:
         """See Departure."""
-        return f"{self.kind}, share {self.share:g}"
+        return f"{self.kind} (share {self.share:g})"
 
     def check(self, severity: float) -> None:
         """See Departure."""
@@ -160,7 +160,7 @@ class Skew(LawDeparture):
     @property
     def name(self) -> str:
         """See Departure."""
-        return self.kind if self.family == "gamma" else f"{self.kind}, {self.family}"
+        return self.kind if self.family == "gamma" else f"{self.kind} ({self.family})"
 
     def check(self, severity: float) -> None:
         """See Departure."""

@@ -104,7 +104,7 @@ class Fan(RangeSpread):
     @property
     def name(self) -> str:
         """See Departure."""
-        return super().name if self.direction == "up" else f"{super().name}, downwards"
+        return super().name if self.direction == "up" else f"{super().name} (downwards)"
 
     def exponent(self, t: Floats) -> Floats:
         """See RangeSpread."""
@@ -140,7 +140,7 @@ class Bowtie(RangeSpread):
     @property
     def name(self) -> str:
         """See Departure."""
-        return f"{super().name}, spindle" if self.spindle else super().name
+        return f"{super().name} (spindle)" if self.spindle else super().name
 
     def exponent(self, t: Floats) -> Floats:
         """See RangeSpread."""

@@ -75,15 +75,31 @@ class Threat:
     premium: float
 
 
-def worst_of(spots: Iterable[Spot]) -> Spot:
+def worst_of(spots: Iterable[Spot], neutral: float = 0.0) -> Spot:
     """The spot to worry about most: one that gives before one that does not, then the one that loses most.
+
+    Of spots that differ by no more than simulation noise, the farthest from neutral: it speaks for those before it.
 
     Parameters
     ----------
     spots : iterable of Spot
         At least one: the severities to be feared, the plausible ones or the ladder.
+    neutral : float
+        The severity at which the assumption holds.
     """
-    return min(spots, key=_badness)
+    known = list(spots)
+    worst = min(known, key=_badness)
+    alike = [
+        spot
+        for spot in known
+        if spot.judgement.verdict is worst.judgement.verdict
+        and abs(spot.share - worst.share) <= _NOISE * math.hypot(spot.mc_se, worst.mc_se)
+    ]
+    return max(alike, key=lambda spot: abs(spot.severity - neutral)) if not worst.exact else worst
+
+
+_NOISE = 2.0
+"""Standard errors of a difference that are taken for noise."""
 
 
 _ORDER = {Verdict.GIVES: 0, Verdict.UNSETTLED: 1, Verdict.HOLDS: 2}

@@ -147,9 +147,9 @@ class Grid:
 
 
 def _variant(departure: Departure) -> str:
-    """The column with what its name says besides: 'dry_hours, downwards'."""
+    """The column with what its name says besides: 'dry_hours (downwards)'."""
     rest = departure.name.removeprefix(departure.kind).removeprefix(f" along {departure.along}").strip(", ")
-    return ", ".join(part for part in (departure.along, rest) if part)
+    return " ".join(part for part in (departure.along, rest) if part)
 
 
 def _options(departure: Departure) -> str:

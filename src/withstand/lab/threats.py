@@ -104,7 +104,7 @@ class Assessment:
             spots += [] if baseline is None else [baseline]
         if not spots:
             return None
-        worst = worst_of(spots)
+        worst = worst_of(spots, axis.departure.neutral)
         side = self._side(axis, worst.severity)
         tipping = self.tippings.get(Line(axis.identity, procedure, focus, side))
         if tipping is None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import textwrap
 import unicodedata
 from collections.abc import Sequence
@@ -64,11 +65,22 @@ def _focus_block(view: View, focus: str) -> list[str]:
     lines = _wrapped(title)
     if not told:
         return [*lines, "  No departure was tried."]
-    lines += _table_row([name.upper() for name, _ in COLUMNS])
-    for rank, worry in enumerate(told, 1):
+    pressing = [worry for worry in told if worry.verdict != "holds"]
+    if pressing:
+        lines += _table_row([name.upper() for name, _ in COLUMNS])
+    for rank, worry in enumerate(pressing, 1):
         lines += _table_row([str(rank), worry.name, worry.turns, worry.allowed, worry.covers])
         lines += [f"    {line}" for line in _fold(_help(worry), WIDTH - 4, "   ") if line]
-    return lines
+    calm = [worry for worry in told if worry.verdict == "holds"]
+    return [*lines, *_calm(view, calm)] if calm else lines
+
+
+def _calm(view: View, worries: Sequence[Worry]) -> list[str]:
+    """What holds, in a few lines: the worst severity to be feared and the coverage there."""
+    planned = not any(math.isfinite(float(row.observed)) for row in view.tipping_rows)
+    reach = "as far as it was tried" if planned else "at the worst your data allow (where they do not say, the most tried)"
+    told = "; ".join(f"{one.name}, {one.covers.removesuffix(' (exact)')}" for one in worries)
+    return _wrapped(f"It holds {reach}: {told}.", "    ")
 
 
 def _help(worry: Worry) -> str:

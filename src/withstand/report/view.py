@@ -184,6 +184,11 @@ class View:
     def _tippings(self) -> dict[tuple[Hashable, ...], Any]:
         return _first_rows(self.outcome.tipping)
 
+    @property
+    def tipping_rows(self) -> list[Any]:
+        """The rows of tipping severities, as named tuples."""
+        return list(self._tippings.values())
+
     def ranked(self, focus: str) -> list[Axis]:
         """Every axis, what to worry about first coming first."""
         order = [axis for axis, _, ranked_focus in self._ranks if ranked_focus == focus]

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
 from dataclasses import dataclass
 
 from withstand.report.view import Axis, Reading, View
@@ -66,7 +65,7 @@ def worries(view: View, procedure: str, focus: str) -> list[Worry]:
                 turning(view, axis, procedure, focus),
                 allowed(view, axis, procedure, focus) or "not known",
                 _covers(view, axis, procedure, focus, words),
-                _rows(row, view.bounds or ()),
+                _rows(row),
                 _instead(view, axis, row, focus),
                 "" if math.isnan(seen) else f"{percent(seen, decimals=0)} %",
             )
@@ -143,12 +142,17 @@ def _covers(view: View, axis: Axis, procedure: str, focus: str, words: SeverityW
         judged = view.verdict(axis, severity, procedure, focus)
         besides = ""
         if judged is not None and judged[0] != "holds" and judged[1] not in ("coverage", "size"):
-            besides = f"; {judged[1].replace('_', ' ')} {number(judged[2], 2)}"
+            besides = f"; {_besides(judged[1], judged[2])}"
         return f"{short_share(reading, bounds)} % {where}{' (exact)' if reading.exact else ''}{besides}"
     if row is None or math.isnan(row.coverage_there):
         size = _reading(view, axis, severity, procedure, focus, "size")
         return "takes simulation" if size is None else f"size {share(size)} {where}"
     return f"{percent(float(row.coverage_there), bounds)} % {where}{' (exact)' if row.method == 'exact' else ''}"
+
+
+def _besides(measure: str, value: float) -> str:
+    """The measure that decided, where coverage did not."""
+    return f"bias {number(value, 2)} SD" if measure == "bias_in_sd" else f"{measure.replace('_', ' ')} {number(value, 2)}"
 
 
 def _reading(view: View, axis: Axis, severity: float, procedure: str, focus: str, measure: str) -> Reading | None:
@@ -157,11 +161,11 @@ def _reading(view: View, axis: Axis, severity: float, procedure: str, focus: str
     return view.reading(axis, severity, procedure, focus, measure)
 
 
-def _rows(row: object, bounds: Sequence[float]) -> str:
+def _rows(row: object) -> str:
     cure = getattr(row, "cure", None)
     told = cure if isinstance(cure, str) else ""
     limit = float(getattr(row, "limit", math.nan))
-    return f"{told} (covers {percent(limit, bounds)} % in the limit)" if told and math.isfinite(limit) else told
+    return f"{told} (covers {percent(limit)} % in the limit)" if told and math.isfinite(limit) else told
 
 
 def _instead(view: View, axis: Axis, row: object, focus: str) -> str:
