@@ -49,17 +49,20 @@ def test_two_workers_give_the_same_bits(job, reference):
 
 
 def test_an_interrupted_run_goes_on_to_the_same_bits(job, reference, tmp_path):
-    class Stop(Exception):
+    class StopError(Exception):
         pass
 
-    def stop_after_two(done, count=[0]):
-        count[0] += done
-        if count[0] == 2:
-            raise Stop
+    count = 0
+
+    def stop_after_two(done):
+        nonlocal count
+        count += done
+        if count == 2:
+            raise StopError
 
     path = tmp_path / "ledger.sqlite"
     with open_executor(1) as executor:
-        with pytest.raises(Stop):
+        with pytest.raises(StopError):
             Runner(job, Ledger(path), executor).advance(CELLS, 5, stop_after_two)
         runner = Runner(job, Ledger(path), executor)
         assert runner.read((0, 0)).tasks == 2

@@ -1,3 +1,4 @@
+import dataclasses
 import math
 
 import pytest
@@ -41,6 +42,15 @@ def test_equals_are_ordered_by_margin_and_then_by_name():
 def test_the_worst_severity_is_not_the_largest_where_harm_turns_back():
     assert worst_of([spot(0.95, 1.0), spot(0.91, 2.0), spot(0.93, 4.0)]).severity == 2.0
     assert worst_of([spot(0.951, 1.0), spot(0.97, 2.0, bias=0.6)]).severity == 2.0
+
+
+def test_simulated_severities_within_noise_are_told_by_the_farthest():
+    def simulated(share, severity):
+        return dataclasses.replace(spot(share, severity), exact=False, mc_se=0.002)
+
+    assert worst_of([simulated(0.9492, 1.0), simulated(0.9501, 2.0), simulated(0.9499, 4.0)]).severity == 4.0
+    assert worst_of([simulated(0.9412, 1.0), simulated(0.9501, 2.0)]).severity == 1.0
+    assert worst_of([simulated(0.9501, 0.25), simulated(0.9499, 1.5)], neutral=1.0).severity == 0.25
 
 
 H, G, U = Verdict.HOLDS, Verdict.GIVES, Verdict.UNSETTLED

@@ -66,7 +66,11 @@ def test_each_departure_is_ranked_at_the_worst_severity_the_residuals_allow(outc
         assert low - 0.01 * abs(low) <= row.worst_severity <= high + 0.01 * abs(high)
         mine = coverage[coverage["departure"] == row.departure]
         allowed = mine[(mine["severity"] >= low * 0.99) & (mine["severity"] <= high * 1.01)]
-        assert row.coverage_there == min([*allowed["value"], 0.95])
+        lowest = allowed.loc[allowed["value"].idxmin()]
+        # Simulated severities that differ by less than two standard errors are one to the ranking.
+        there = mine.loc[(mine["severity"] - row.worst_severity).abs().idxmin()]
+        noise = 2.0 * math.hypot(lowest["mc_se"], there["mc_se"])
+        assert 0.0 <= row.coverage_there - min(lowest["value"], 0.95) <= noise
 
 
 def test_the_headline_leads_with_the_first_of_the_ranking(outcome):

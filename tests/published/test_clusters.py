@@ -7,9 +7,9 @@ import pytest
 
 from withstand.departures import Clusters
 from withstand.procedures.base import make_procedure
+from withstand.procedures.classical import Ols
 from withstand.procedures.cluster import Cr0
 from withstand.procedures.sandwich import Hc0
-from withstand.procedures.classical import Ols
 from withstand.study.design import Design
 
 from .simulation import coefficient, simulate
@@ -112,8 +112,8 @@ class FewClusters:
 
 def test_few_clusters_pattern():
     """Cameron & Miller (2015): rejection at 5 % with 6, 10, 20 clusters falls for t(n-k) .215 .147 .104 and t(G-1) .125 .103
-    .082, and is never much above nominal for CR2 with Satterthwaite degrees of freedom, .052 .050 .047. Pattern only: their design is not
-    published in a form that can be recomputed."""
+    .082, and is never much above nominal for CR2 with Satterthwaite degrees of freedom, .052 .050 .047. Pattern only: their
+    design is not published in a form that can be recomputed."""
     sizes = {}
     for G in (6, 10, 20):
         rows = FewClusters(G)

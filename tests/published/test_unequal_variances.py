@@ -1,9 +1,9 @@
 """Size and power when the last group has another SD.
 
-Source of `unequal_variance_sizes.csv` and `unequal_variance_power.csv`, column `published`: Delacre, Leys, Mora & Lakens (2019),
-International Review of Social Psychology 32(1):13, supplementary data, 1,000,000 replicates a cell (tier: simulation). Column
-`closed_form`: inversion of the characteristic function of the quadratic form, eigenvalue route, computed independently of this
-project (tier: closed form).
+Source of `unequal_variance_sizes.csv` and `unequal_variance_power.csv`, column `published`: Delacre, Leys, Mora & Lakens
+(2019), International Review of Social Psychology 32(1):13, supplementary data, 1,000,000 replicates a cell (tier: simulation).
+Column `closed_form`: inversion of the characteristic function of the quadratic form, eigenvalue route, computed independently
+of this project (tier: closed form).
 """
 
 from dataclasses import dataclass

@@ -68,7 +68,7 @@ def test_the_page_says_the_answer_and_its_evidence(exact, simulated):
     text = size_markdown(exact, ["At the corners: 8 to 80 rows."])
     assert text.startswith("# How many rows: A \\| B\n")
     for size in exact.sizes:
-        assert f"{size.procedure}: {size.n} rows (exactly)" in text
+        assert f"{size.procedure}: {size.n} rows (exact)" in text
     assert "At the corners: 8 to 80 rows." in text
     assert "| exact |" in text
     assert "±" not in text.split("Each number")[0]

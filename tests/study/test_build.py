@@ -7,7 +7,7 @@ from statsmodels.stats.outliers_influence import variance_inflation_factor
 
 from withstand.errors import DesignError, FormulaError, InputError, ScenarioError, TableError
 from withstand.study import Study
-from withstand.study.facts import design_facts
+from withstand.study.facts import design_facts, focal_estimates
 from withstand.study.focus import FocusKind
 
 
@@ -152,10 +152,28 @@ def test_levels_keep_the_order_of_a_categorical(frame):
     assert Study.from_frame(frame, "y ~ s").design.names == ("Intercept", "s[ash]", "s[NA]")
 
 
+@pytest.mark.parametrize("weights", [None, "w"])
+def test_estimates_and_intervals_of_the_focus(frame, weights):
+    entries = ["x", "s", "s[oak] - s[ash]", {"at": {"x": 50.0, "s": "oak"}}, {"at": {"x": 50.0, "s": "oak"}, "of": "new"}]
+    study = Study.from_frame(frame, "y ~ x + s", focus=entries, weights=weights, level=0.9)
+    found = focal_estimates(study)
+    assert found[1] == {}
+    X, y = study.design.X, study.response
+    direct = (sm.OLS(y, X) if weights is None else sm.WLS(y, X, weights=study.design.weights)).fit()
+    for place in (0, 2, 3):
+        other = direct.t_test(study.focus[place].L)
+        low, high = other.conf_int(alpha=0.1)[0]
+        assert list(found[place].values()) == pytest.approx([other.effect[0], low, high], rel=1e-8)
+    new = direct.get_prediction(study.focus[4].L).summary_frame(alpha=0.1)
+    expected = new[["mean", "obs_ci_lower", "obs_ci_upper"]].to_numpy()[0]
+    assert list(found[4].values()) == pytest.approx(expected, rel=1e-8)
+
+
 def test_collinearity_is_told(frame):
     frame["x2"] = frame["x"] + 0.1 * frame["z"]
     study = Study.from_frame(frame, "y ~ x + x2", focus=["x", "x2 - x"])
     facts = design_facts(study)
+    assert list(facts.widening) == ["x"]
     reference = variance_inflation_factor(study.design.X, 1)
     assert facts.vif["x"] == pytest.approx(reference, rel=1e-8)
     assert facts.widening["x"] == pytest.approx(np.sqrt(reference), rel=1e-8)

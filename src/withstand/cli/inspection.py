@@ -27,9 +27,10 @@ def inspection(outcome: Outcome) -> list[str]:
     lines = ["Design and fit", *_pairs(study_facts(view))]
     for table in fact_tables(view):
         lines += ["", table.caption, *columns([table.columns, *([cell.text for cell in row] for row in table.rows)])]
-    lines += ["", "What collinearity costs", *_collinearity(outcome.facts)]
-    told = [(focus, estimate_sentence(view, focus)) for focus in view.foci]
-    lines += ["", "Focus", *_pairs([(focus, sentence) for focus, sentence in told if sentence])]
+    if outcome.facts["widening"]:
+        lines += ["", "What collinearity costs", *_collinearity(outcome.facts)]
+    told = [(focus, sentence) for focus in view.foci if (sentence := estimate_sentence(view, focus))]
+    lines += ["", "Focus", *_pairs(told)] if told else []
     return [*lines, "", *screen(outcome).splitlines()]
 
 

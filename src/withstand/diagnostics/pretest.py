@@ -161,9 +161,18 @@ def detector(diagnostic: Diagnostic, design: Design, alpha: float) -> Callable[[
     """The test of size alpha: whether the diagnostic fails, (B,) for a Sample."""
     statistic = diagnostic.prepare(design)
     if diagnostic.p_values(design, np.empty(0)) is not None:
-        return lambda sample: np.asarray(_known(diagnostic.p_values(design, statistic(sample))) <= alpha)
-    critical = Critical.of(_ideal_values(statistic, design), diagnostic.tail, alpha)
-    return lambda sample: critical.rejects(statistic(sample))
+
+        def fails(values: Floats) -> Flags:
+            return np.asarray(_known(diagnostic.p_values(design, values)) <= alpha)
+    else:
+        fails = Critical.of(_ideal_values(statistic, design), diagnostic.tail, alpha).rejects
+
+    def detect(sample: Sample) -> Flags:
+        # Without residuals there is nothing to see: the statistic is 0/0, and no check fails.
+        with np.errstate(divide="ignore", invalid="ignore"):
+            return fails(statistic(sample))
+
+    return detect
 
 
 def _known(p: Floats | None) -> Floats:

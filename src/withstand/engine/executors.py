@@ -84,6 +84,39 @@ class InProcess(Executor):
         return future
 
 
+class Workers(ProcessPoolExecutor):
+    """Worker processes that leave interrupts to the driver from their first moment on.
+
+    A terminal sends Ctrl-C to workers too. The driver alone ends the run, and closes them.
+    """
+
+    def __init__(self, workers: int) -> None:
+        # A fresh interpreter a worker: a forked one would inherit the state of threaded libraries.
+        super().__init__(workers, mp_context=multiprocessing.get_context("spawn"), initializer=_ignore_interrupts)
+
+    def submit(self, fn: Any, /, *args: Any, **kwargs: Any) -> Future[Any]:
+        """Submit; a worker that this starts inherits that interrupts are held back, until its initializer ignores them."""
+        with _interrupts_held_back():
+            return super().submit(fn, *args, **kwargs)
+
+
+def _ignore_interrupts() -> None:
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+
+
+@contextmanager
+def _interrupts_held_back() -> Iterator[None]:
+    """Hold back SIGINT in this thread, where the system can; one that comes meanwhile is delivered afterwards."""
+    if not hasattr(signal, "pthread_sigmask"):
+        yield
+        return
+    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
+    try:
+        yield
+    finally:
+        signal.pthread_sigmask(signal.SIG_SETMASK, before)
+
+
 @contextmanager
 def open_executor(workers: int = 1, cluster: str | None = None) -> Iterator[Executor]:
     """Open an executor.
@@ -106,18 +139,11 @@ def open_executor(workers: int = 1, cluster: str | None = None) -> Iterator[Exec
     elif workers == 1:
         yield InProcess()
     else:
-        # A fresh interpreter a worker: a forked one would inherit the state of threaded libraries.
-        context = multiprocessing.get_context("spawn")
-        pool = ProcessPoolExecutor(workers, mp_context=context, initializer=_leave_interrupts_to_the_driver)
+        pool = Workers(workers)
         try:
             yield pool
         finally:
             pool.shutdown(wait=True, cancel_futures=True)
-
-
-def _leave_interrupts_to_the_driver() -> None:
-    """A terminal sends Ctrl-C to workers too; the driver alone ends the run, and closes them."""
-    signal.signal(signal.SIGINT, signal.SIG_IGN)
 
 
 @contextmanager

@@ -9,7 +9,7 @@ from typing import Any
 
 from withstand import __version__
 from withstand.lab.plan import Plan
-from withstand.study.facts import design_facts
+from withstand.study.facts import design_facts, focal_estimates
 from withstand.study.study import Study
 
 _LIBRARIES = ("numpy", "scipy", "pandas", "statsmodels", "formulaic")
@@ -36,9 +36,10 @@ def study_facts(study: Study) -> dict[str, Any]:
             {
                 "name": focus.name,
                 "kind": str(focus.kind),
-                "effect": None if focus.effect is None else [float(value) for value in focus.effect],
+                "effect": None if focus.effect is None else focus.effect.tolist() if focus.k > 1 else float(focus.effect[0]),
+                **estimate,
             }
-            for focus in study.focus
+            for focus, estimate in zip(study.focus, focal_estimates(study), strict=True)
         ],
     }
     if study.account is not None:

@@ -180,5 +180,5 @@ def _span(size: ProcedureSize, level: float) -> str:
     if size.low == size.high == size.n and size.least:
         return "the fewest that were possible"
     if size.low == size.high == size.n and size.method == "exact":
-        return "exactly"
+        return "exact"
     return f"{100 * level:g} % interval {size.low} to {size.high}{'' if size.bounded else ' or more'}"

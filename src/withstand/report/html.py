@@ -203,4 +203,6 @@ def _known(value: Any) -> str:
 
 
 def _row(row: Any) -> str:
-    return ", ".join(f"{name} {value}" for name, value in row.items()) if isinstance(row, Mapping) else str(row)
+    if not isinstance(row, Mapping):
+        return str(row)
+    return ", ".join(f"{name} {number(value) if isinstance(value, float) else value}" for name, value in row.items())

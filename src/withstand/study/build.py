@@ -187,8 +187,8 @@ def _design(X: Floats, names: tuple[str, ...], table: CleanTable) -> Design:
 def _saturation(design: Design, labels: tuple[str, ...]) -> list[str]:
     """What rows of leverage 1 do."""
     return [
-        f"row {labels[row]} alone decides a coefficient (leverage 1): it has no residual of its own, so it says nothing about the "
-        "error SD, and HC2, HC3 and their kin are not defined"
+        f"row {labels[row]} alone decides a coefficient (leverage 1): it has no residual, says nothing about the error SD, "
+        "and HC2, HC3 and their kin are not defined"
         for row in design.saturated_rows
     ]
 

@@ -6,9 +6,11 @@ from dataclasses import asdict, dataclass
 from typing import Any
 
 import numpy as np
+from scipy import stats
 from scipy.linalg import solve_triangular
 
 from withstand.study.design import Design, Floats
+from withstand.study.focus import FocusKind
 from withstand.study.study import Study
 
 HIGH_LEVERAGE = 2.0
@@ -104,7 +106,7 @@ def variance_inflation(design: Design) -> dict[str, float]:
 
 
 def widening(study: Study) -> dict[str, float]:
-    """The factor by which collinearity widens the classical interval of each focal coefficient or contrast.
+    """The factor by which collinearity widens the classical interval of each focal coefficient.
 
     Parameters
     ----------
@@ -112,20 +114,52 @@ def widening(study: Study) -> dict[str, float]:
 
     Notes
     -----
-    The variance of L b over the sum of L_j^2 / S_j, S_j the spread of column j about its mean, as it would be with the columns
-    uncorrelated; the square root of it. For one coefficient that is the square root of its variance inflation factor.
-    Quantities that involve the intercept are left out: the spread of a constant is no measure of anything.
+    The square root of its variance inflation factor. Contrasts and the intercept have none: columns that code levels of one
+    factor are correlated by their making.
     """
-    design, spread = study.design, _spread(study.design)
+    inflation = variance_inflation(study.design)
     factors = {}
     for focus in study.focus:
-        row = focus.L[0]
-        if focus.k > 1 or (spread[row != 0.0] <= 0.0).any():
-            continue
-        actual = float(np.sum(design.basis_rows(focus.L) ** 2))
-        used = row != 0.0
-        factors[focus.name] = float(np.sqrt(actual / np.sum(row[used] ** 2 / spread[used])))
+        used = np.flatnonzero(focus.L[0])
+        if focus.kind is FocusKind.COEFFICIENT and used.size == 1 and study.design.names[used[0]] in inflation:
+            factors[focus.name] = float(np.sqrt(inflation[study.design.names[used[0]]]))
     return factors
+
+
+def focal_estimates(study: Study) -> list[dict[str, float]]:
+    """Estimate and classical interval of each focal quantity of the reference fit; empty mappings without data or for a term.
+
+    Parameters
+    ----------
+    study : Study
+
+    Returns
+    -------
+    list of mapping
+        estimate, low, high, in units of the focal quantity.
+    """
+    if study.residuals is None:
+        return [{} for _ in study.focus]
+    design, sd = _as_fitted(study, study.residuals)
+    critical = float(stats.t.isf(study.alpha / 2.0, design.df))
+    found: list[dict[str, float]] = []
+    for focus in study.focus:
+        if focus.k > 1:
+            found.append({})
+            continue
+        estimate = float(focus.L[0] @ study.coefficients)
+        own = 1.0 if focus.kind is FocusKind.NEW else 0.0
+        reach = critical * sd * float(np.sqrt(np.sum(design.basis_rows(focus.L) ** 2) + own))
+        found.append({"estimate": estimate, "low": estimate - reach, "high": estimate + reach})
+    return found
+
+
+def _as_fitted(study: Study, residuals: Floats) -> tuple[Design, float]:
+    """The design of the reference fit and its error SD: weighted where weights are known."""
+    if study.design.weights is None:
+        return study.design, study.error_sd
+    sd = float(np.sqrt(np.sum(study.design.weights * residuals**2) / study.design.df))
+    return study.design.weighted, sd
 
 
 def _spread(design: Design) -> Floats:
@@ -148,10 +182,7 @@ def _high_leverage(design: Design, labels: tuple[str, ...]) -> list[dict[str, An
 
 
 def _coefficients(study: Study) -> list[dict[str, Any]]:
-    design, sd = study.design, study.error_sd
-    if design.weights is not None and study.residuals is not None:
-        sd = float(np.sqrt(np.sum(design.weights * study.residuals**2) / design.df))
-        design = design.weighted
+    design, sd = (study.design, study.error_sd) if study.residuals is None else _as_fitted(study, study.residuals)
     inverse = solve_triangular(design.R, np.eye(design.p))
     errors = sd * np.sqrt(np.einsum("ij,ij->i", inverse, inverse))
     return [
