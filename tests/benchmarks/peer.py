@@ -59,15 +59,19 @@ def make_job(n: int, p: int) -> Job:
 
 
 def statsmodels_loop(job: Job, replicates: int) -> int:
-    """OLS fit with classical and HC3 intervals, one data set at a time; returns the HC3 intervals that cover."""
+    """OLS fit with classical and HC3 intervals and tests, one data set at a time; returns the HC3 intervals that cover.
+
+    The engine tallies intervals and tests of both procedures, so the loop asks for both.
+    """
     generator = np.random.default_rng(1)
     X = job.study.design.X
     covered = 0
     for _ in range(replicates):
         fit = sm.OLS(generator.standard_normal(len(X)), X).fit()
-        fit.conf_int()
-        low, high = fit.get_robustcov_results("HC3", use_t=True).conf_int()[1]
-        covered += low <= 0.0 <= high
+        fit.conf_int(), fit.pvalues
+        robust = fit.get_robustcov_results("HC3", use_t=True)
+        low, high = robust.conf_int()[1]
+        covered += low <= 0.0 <= high and robust.pvalues[1] >= 0.05
     return covered
 
 

@@ -25,7 +25,7 @@ def test_a_report_is_whole_and_the_same_from_what_was_stored(bare, tmp_path):
     first = contents(tmp_path / "one")
     tables = {"measures.csv", "verdicts.csv", "tipping.csv", "ranking.csv", "run.json"}
     texts = {"report.html", "summary.md", "statement.md"}
-    figures = {f"figures/{name}-1-dry-hours.{end}" for name in ("coverage", "size", "premium") for end in ("svg", "png")}
+    figures = {f"figures/{name}-1-dry-hours.{end}" for name in ("coverage", "premium") for end in ("svg", "png")}
     assert set(first) == tables | texts | figures
     write_report(restore(tmp_path / "one"), tmp_path / "two")
     assert contents(tmp_path / "two") == first

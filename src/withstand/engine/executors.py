@@ -100,6 +100,10 @@ class Workers(ProcessPoolExecutor):
             return super().submit(fn, *args, **kwargs)
 
 
+def _load() -> None:
+    """Nothing: to find this function, a worker imports the engine."""
+
+
 def _ignore_interrupts() -> None:
     signal.signal(signal.SIGINT, signal.SIG_IGN)
 
@@ -140,6 +144,8 @@ def open_executor(workers: int = 1, cluster: str | None = None) -> Iterator[Exec
         yield InProcess()
     else:
         pool = Workers(workers)
+        for _ in range(workers):
+            pool.submit(_load)  # they start and import while the driver is at the exact answers
         try:
             yield pool
         finally:

@@ -26,6 +26,9 @@ FIGURES: dict[str, Callable[[View, str], Figure]] = {
 }
 """Every figure by name, in the order of the report."""
 
+SAME = 1e-9
+"""Shares closer than this are one."""
+
 DOTS = 160
 """Dots an inch of the PNG files."""
 
@@ -38,6 +41,23 @@ def available(view: View, focus: str) -> list[str]:
     if "coverage" in found and view.has("coverage", focus):
         found.append("premium")
     return [*found, "harm"] if harm_points(view, focus) else found
+
+
+def shown(view: View, focus: str) -> list[str]:
+    """Names of the figures that a report shows: those available, without one that repeats another."""
+    return [name for name in available(view, focus) if not (name == "size" and _mirrors(view, focus))]
+
+
+def _mirrors(view: View, focus: str) -> bool:
+    """Whether size is 1 - coverage throughout, so that a second figure would show the same."""
+    for axis, ladder in view.ladders.items():
+        for severity, _ in ladder:
+            for procedure in view.procedures:
+                size = view.reading(axis, severity, procedure, focus, "size")
+                coverage = view.reading(axis, severity, procedure, focus, "coverage")
+                if size is not None and (coverage is None or abs(size.value + coverage.value - 1.0) > SAME):
+                    return False
+    return True
 
 
 def _tried(view: View, focus: str, measure: str) -> bool:

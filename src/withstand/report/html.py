@@ -10,7 +10,7 @@ from jinja2 import Environment, PackageLoader, StrictUndefined
 
 from withstand.lab.outcome import Outcome
 from withstand.report import account, prose
-from withstand.report.figures import FIGURES, as_svg, available
+from withstand.report.figures import FIGURES, as_svg, shown
 from withstand.report.inline import describe, inline_svg
 from withstand.report.style import own_style
 from withstand.report.tables import (
@@ -26,19 +26,16 @@ from withstand.report.tables import (
 from withstand.report.view import View, view_of
 from withstand.report.words import count, listing, number, plural
 
-SAME = 1e-9
-"""Shares closer than this are one."""
-
 Pictures = Mapping[tuple[str, str], bytes]
 """SVG by focus and name of the figure."""
 
 
 def draw_all(outcome: Outcome) -> dict[tuple[str, str], bytes]:
-    """Every figure there are numbers for, as SVG, by focus and name."""
+    """Every figure that is shown, as SVG, by focus and name."""
     view = view_of(outcome)
     pictures = {}
     for focus in view.foci:
-        for name in available(view, focus):
+        for name in shown(view, focus):
             with own_style():
                 drawn = FIGURES[name](view, focus)
             pictures[focus, name] = as_svg(drawn)
@@ -101,7 +98,7 @@ def _focus(view: View, focus: str, place: int, drawn: Pictures) -> dict[str, Any
             "svg": inline_svg(drawn[focus, name], f"f{place}{name}", describe(view, name, focus)),
         }
         for name in FIGURES
-        if (focus, name) in drawn and not (name == "size" and _mirrors(view, focus))
+        if (focus, name) in drawn
     ]
     return {
         "name": focus,
@@ -114,18 +111,6 @@ def _focus(view: View, focus: str, place: int, drawn: Pictures) -> dict[str, Any
         "verdicts": [verdict_table(view, focus), turning_table(view, focus)] if lead and view.ladders else [],
         "procedures": _procedure_tables(view, focus) if lead else [],
     }
-
-
-def _mirrors(view: View, focus: str) -> bool:
-    """Whether size is 1 - coverage throughout, so that a second figure would show the same."""
-    for axis, ladder in view.ladders.items():
-        for severity, _ in ladder:
-            for procedure in view.procedures:
-                size = view.reading(axis, severity, procedure, focus, "size")
-                coverage = view.reading(axis, severity, procedure, focus, "coverage")
-                if size is not None and (coverage is None or abs(size.value + coverage.value - 1.0) > SAME):
-                    return False
-    return True
 
 
 def _procedure_tables(view: View, focus: str) -> list[Table]:

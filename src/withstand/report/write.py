@@ -5,7 +5,7 @@ from __future__ import annotations
 from pathlib import Path
 
 from withstand.lab.outcome import Outcome
-from withstand.report.figures import as_png, as_svg, available, figure
+from withstand.report.figures import as_png, as_svg, figure, shown
 from withstand.report.files import write_files
 from withstand.report.html import page
 from withstand.report.statement import statement
@@ -43,7 +43,7 @@ def write_report(outcome: Outcome, folder: Path) -> Path:
     pictures: dict[tuple[str, str], bytes] = {}
     files: dict[str, bytes] = dict(stored(outcome))
     for place, focus in enumerate(view.foci, 1):
-        for name in available(view, focus):
+        for name in shown(view, focus):
             drawn = figure(outcome, name, focus)
             pictures[focus, name] = as_svg(drawn)
             base = f"{FIGURES}/{figure_file(name, place, focus)}"
