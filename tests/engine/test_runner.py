@@ -2,6 +2,7 @@
 
 import sqlite3
 
+import distributed
 import numpy as np
 import pytest
 
@@ -43,6 +44,17 @@ def reference(job):
 
 def test_two_workers_give_the_same_bits(job, reference):
     with open_executor(2) as executor:
+        runner = Runner(job, Ledger(), executor, workers=2)
+        runner.advance(CELLS, 5)
+        assert same(reference, tallies(runner))
+
+
+@pytest.mark.filterwarnings("ignore::DeprecationWarning")  # of the cluster's own libraries
+def test_a_cluster_gives_the_same_bits(job, reference):
+    with (
+        distributed.LocalCluster(n_workers=1, threads_per_worker=1, processes=False, dashboard_address=None) as cluster,
+        open_executor(cluster=cluster.scheduler_address) as executor,
+    ):
         runner = Runner(job, Ledger(), executor, workers=2)
         runner.advance(CELLS, 5)
         assert same(reference, tallies(runner))

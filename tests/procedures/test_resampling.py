@@ -186,6 +186,22 @@ def test_pairs_bootstrap(kind, seed):
 
 
 @pytest.mark.parametrize(("kind", "seed"), CASES)
+def test_pairs_bootstrap_with_percentile_intervals(kind, seed):
+    design, errors = make(kind, seed)
+    procedure = PairsBootstrap(DRAWS, interval="percentile")
+    sample = sample_of(design, errors)
+    focus, X = slope(design), design.X
+    fit = procedure.prepare(design, [focus], LEVEL)(sample)[0]
+    counts = procedure._draw(design, generator(sample, procedure.name)).counts.astype(int)
+    for replicate in range(errors.shape[1]):
+        y = errors[:, replicate]
+        drawn = [(focus.L @ ols(np.repeat(X, count, axis=0), np.repeat(y, count))[0])[0] for count in counts]
+        np.testing.assert_allclose([fit.low[replicate], fit.high[replicate]], np.sort(drawn)[[1, -2]], rtol=1e-5, atol=1e-9)
+        assert fit.claimed[replicate] == pytest.approx(np.var(drawn, ddof=1), rel=1e-5)
+        np.testing.assert_array_equal(fit.rejects(np.zeros(1))[replicate], not np.sort(drawn)[1] <= 0.0 <= np.sort(drawn)[-2])
+
+
+@pytest.mark.parametrize(("kind", "seed"), CASES)
 def test_residual_bootstrap(kind, seed):
     design, errors = make(kind, seed)
     procedure = ResidualBootstrap(DRAWS)
@@ -313,6 +329,7 @@ def test_ranks_and_p_values_agree():
         ("wild-bootstrap", {"residuals": "hc4"}, r"wild-bootstrap\.residuals: residuals is 'hc4'"),
         ("wild-cluster-bootstrap", {"weights": "none"}, "weights is 'none'"),
         ("pairs-bootstrap", {"draws": 9}, r"pairs-bootstrap\.draws: draws is 9"),
+        ("pairs-bootstrap", {"interval": "bca"}, r"pairs-bootstrap\.interval: interval is 'bca'"),
         ("permutation", {"draws": 0}, "draws is 0"),
     ],
 )
@@ -332,6 +349,7 @@ def test_not_applicable_says_why():
     design, _ = make("plain", 1)
     bare = Design(design.X, design.names)
     assert "new response" in WildBootstrap().not_applicable(design, new_at(design))
+    assert "several coefficients" in PairsBootstrap(interval="percentile").not_applicable(design, two_slopes(design))
     assert "new response" in Permutation().not_applicable(design, new_at(design))
     assert "no groups" in WildClusterBootstrap().not_applicable(bare, slope(design))
     for focus in (mean_at(design), Focus.coefficient("Intercept", design.names)):

@@ -13,12 +13,13 @@ from abc import ABC, abstractmethod
 from collections.abc import Sequence
 from dataclasses import dataclass, fields
 from enum import StrEnum
-from typing import ClassVar, Protocol, TypeVar
+from typing import ClassVar, Protocol
 
 import numpy as np
 
 from withstand.departures.law import Law
-from withstand.errors import ScenarioError, nearest
+from withstand.errors import ScenarioError
+from withstand.registry import Registry
 from withstand.study.design import Design, Floats
 from withstand.study.focus import Focus, Point
 
@@ -233,26 +234,8 @@ class OutlierDeparture(Departure):
         """The shifts on these rows; None where the severity is neutral."""
 
 
-T = TypeVar("T", bound=Departure)
-
-REGISTRY: dict[str, type[Departure]] = {}
+REGISTRY = Registry(Departure, "departure", "departure.kind", attribute="kind")
 """Every departure by kind, in the order of registration."""
 
-
-def register(cls: type[T]) -> type[T]:
-    """Class decorator: make a departure known by its kind."""
-    REGISTRY[cls.kind] = cls
-    return cls
-
-
-def departure_class(kind: str) -> type[Departure]:
-    """Look up a departure.
-
-    Raises
-    ------
-    ScenarioError
-        If the kind is unknown; the message offers the nearest one.
-    """
-    if kind not in REGISTRY:
-        raise ScenarioError(f"unknown departure '{kind}'", where="departure.kind", remedy=nearest(kind, REGISTRY))
-    return REGISTRY[kind]
+register = REGISTRY.register
+departure_class = REGISTRY.find

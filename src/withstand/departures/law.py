@@ -12,6 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from withstand.study.design import Floats
+from withstand.tails import norm
 
 _LIMIT = 9.0
 """The table covers scores within +- this; beyond it (probability 2e-19 a draw) the last cell is extended linearly."""
@@ -100,8 +101,6 @@ def tabulate(name: str, quantile: Callable[[Floats], Floats], *, skewness: float
 
 
 def _moments(edges: Floats, base: Floats, slope: Floats) -> tuple[float, float]:
-    from scipy.stats import norm
-
     lower, upper = edges[:-1], edges[1:]
     # Survival functions in the upper half keep the small cell probabilities exact.
     mass = np.where(lower >= 0, norm.sf(lower) - norm.sf(upper), norm.cdf(upper) - norm.cdf(lower))

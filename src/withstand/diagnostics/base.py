@@ -10,12 +10,12 @@ from abc import ABC, abstractmethod
 from collections.abc import Callable
 from dataclasses import dataclass, fields
 from enum import StrEnum
-from typing import Any, ClassVar, TypeVar
+from typing import ClassVar
 
 import numpy as np
 
-from withstand.errors import ScenarioError, nearest
 from withstand.procedures.sample import Sample
+from withstand.registry import Registry
 from withstand.study.design import Design, Floats
 
 Statistic = Callable[[Sample], Floats]
@@ -135,34 +135,8 @@ def independent_columns(Z: Floats) -> Floats:
     return np.ascontiguousarray(U[:, s > _RANK * s[0]])
 
 
-T = TypeVar("T", bound=Diagnostic)
-
-REGISTRY: dict[str, type[Diagnostic]] = {}
+REGISTRY = Registry(Diagnostic, "diagnostic", "diagnostic")
 """Every diagnostic by name, in the order of registration."""
 
-
-def register(cls: type[T]) -> type[T]:
-    """Class decorator: make a diagnostic known by its name."""
-    REGISTRY[cls.name] = cls
-    return cls
-
-
-def make_diagnostic(spec: str | Diagnostic, **options: Any) -> Diagnostic:
-    """A diagnostic from its name and options; a diagnostic is returned as it is.
-
-    Raises
-    ------
-    ScenarioError
-        If the name or an option is unknown; the message offers the nearest one.
-    """
-    if isinstance(spec, Diagnostic):
-        return spec
-    if spec not in REGISTRY:
-        raise ScenarioError(f"unknown diagnostic '{spec}'", where="diagnostic", remedy=nearest(spec, REGISTRY))
-    cls = REGISTRY[spec]
-    known = [f.name for f in fields(cls)]
-    for option in options:
-        if option not in known:
-            remedy = nearest(option, known) if known else "It takes no options."
-            raise ScenarioError(f"diagnostic '{spec}' has no option '{option}'", where="diagnostic", remedy=remedy)
-    return cls(**options)
+register = REGISTRY.register
+make_diagnostic = REGISTRY.make

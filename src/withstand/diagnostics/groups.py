@@ -5,8 +5,8 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import stats
 
+from withstand import tails
 from withstand.diagnostics.base import Diagnostic, Statistic, register
 from withstand.procedures.sample import Sample
 from withstand.study.design import Design, Floats
@@ -27,7 +27,7 @@ class GroupF(Diagnostic):
     def p_values(self, design: Design, values: Floats) -> Floats:
         """Upper tail of F, as if the residuals were independent."""
         count = design.group_count
-        return np.asarray(stats.f.sf(values, count - 1, design.n - count))
+        return np.asarray(tails.f.sf(values, count - 1, design.n - count))
 
     def prepare(self, design: Design) -> Statistic:
         """See Diagnostic."""

@@ -5,8 +5,8 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import stats
 
+from withstand import tails
 from withstand.diagnostics.base import Diagnostic, Statistic, register
 from withstand.procedures.sample import Sample
 from withstand.study.design import FULL_LEVERAGE, Design, Floats
@@ -31,7 +31,7 @@ class LargestStudentised(Diagnostic):
 
     def p_values(self, design: Design, values: Floats) -> Floats:
         """Two-sided t, times the number of rows (Bonferroni)."""
-        return np.minimum(1.0, 2.0 * design.n * stats.t.sf(values, design.df - 1))
+        return np.minimum(1.0, 2.0 * design.n * tails.t.sf(values, design.df - 1))
 
     def prepare(self, design: Design) -> Statistic:
         """See Diagnostic."""

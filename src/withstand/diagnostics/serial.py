@@ -5,7 +5,6 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import stats
 
 from withstand.departures.chain import Series
 from withstand.diagnostics.base import Diagnostic, Statistic, Tail, register

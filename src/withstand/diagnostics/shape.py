@@ -5,7 +5,6 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import stats
 
 from withstand.diagnostics.base import Diagnostic, Statistic, Tail, register
 from withstand.procedures.sample import Sample

@@ -6,9 +6,9 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.polynomial.polynomial import polyval
-from scipy import stats
 from scipy.special import ndtri
 
+from withstand import tails
 from withstand.diagnostics.base import Diagnostic, Statistic, Tail, register
 from withstand.procedures.sample import Sample
 from withstand.study.design import Design, Floats
@@ -87,6 +87,6 @@ class ShapiroWilk(Diagnostic):
             gamma = polyval(n, _SMALL_GAMMA)
             beyond = y >= gamma
             score = -np.log(np.where(beyond, 1.0, gamma - y))
-            p = stats.norm.sf(score, polyval(n, _SMALL_MEAN), np.exp(polyval(n, _SMALL_LOG_SD)))
+            p = tails.norm.sf(score, polyval(n, _SMALL_MEAN), np.exp(polyval(n, _SMALL_LOG_SD)))
             return np.where(beyond, 0.0, p)
-        return np.asarray(stats.norm.sf(y, polyval(np.log(n), _MEAN), np.exp(polyval(np.log(n), _LOG_SD))))
+        return np.asarray(tails.norm.sf(y, polyval(np.log(n), _MEAN), np.exp(polyval(np.log(n), _LOG_SD))))

@@ -6,8 +6,8 @@ from abc import abstractmethod
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import stats
 
+from withstand import tails
 from withstand.departures.along import FITTED, column_along
 from withstand.diagnostics.base import Diagnostic, Statistic, independent_columns, register
 from withstand.errors import ScenarioError
@@ -184,7 +184,7 @@ class GoldfeldQuandt(Diagnostic):
     def p_values(self, design: Design, values: Floats) -> Floats:
         """Upper tail of F."""
         low, high = self._degrees(design)
-        return np.asarray(stats.f.sf(values, high, low))
+        return np.asarray(tails.f.sf(values, high, low))
 
     def prepare(self, design: Design) -> Statistic:
         """See Diagnostic."""

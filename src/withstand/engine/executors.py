@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import importlib
 import multiprocessing
 import pickle
 import signal
@@ -155,7 +156,8 @@ def open_executor(workers: int = 1, cluster: str | None = None) -> Iterator[Exec
 @contextmanager
 def _dask(address: str) -> Iterator[Executor]:
     try:
-        from distributed import Client
+        # By name, so that the types are the same to a checker with and without the library.
+        distributed: Any = importlib.import_module("distributed")
     except ImportError as error:
         raise InputError(
             "a cluster needs the library 'distributed', which is not installed",
@@ -163,7 +165,7 @@ def _dask(address: str) -> Iterator[Executor]:
             remedy='Install it with: pip install "withstand[cluster]".',
         ) from error
     try:
-        client = Client(address, timeout="10s")  # type: ignore[no-untyped-call]
+        client = distributed.Client(address, timeout="10s")
     except (OSError, ValueError, TimeoutError) as error:
         raise InputError(
             f"no Dask scheduler answers at '{address}' ({error})",
@@ -171,6 +173,6 @@ def _dask(address: str) -> Iterator[Executor]:
             remedy="Start one, or leave --cluster out to use this machine.",
         ) from error
     try:
-        yield client.get_executor(pure=False)  # type: ignore[no-untyped-call]
+        yield client.get_executor(pure=False)
     finally:
-        client.close()  # type: ignore[no-untyped-call]
+        client.close()

@@ -11,8 +11,8 @@ import math
 from collections.abc import Callable, Sequence
 
 import numpy as np
-from scipy import stats
 
+from withstand import tails
 from withstand.judgement.crossing import crossings
 from withstand.judgement.size_points import LOOKS, FoundSize, Requirement, SizePoint, Sizes
 
@@ -197,7 +197,7 @@ class SizeSearch:
 
 def clear_from(delta: float, looks: int, requirements: int) -> float:
     """Standard errors from which a margin is clear of zero, all looks and requirements sharing the accepted error."""
-    return float(stats.norm.isf(delta / (2.0 * looks * requirements)))
+    return float(tails.norm.isf(delta / (2.0 * looks * requirements)))
 
 
 def _largest(ends: Sequence[float | None]) -> float | None:

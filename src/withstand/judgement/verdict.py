@@ -13,8 +13,7 @@ from collections.abc import Collection, Mapping
 from dataclasses import dataclass
 from enum import StrEnum
 
-from scipy import stats
-
+from withstand import tails
 from withstand.engine.tally import Tally
 from withstand.judgement.aspects import judged
 from withstand.judgement.findings import Aspect, Finding, Kind
@@ -134,7 +133,7 @@ def _interval(name: str, estimate: Estimate, tally: Tally, level: float) -> tupl
     if name in COUNTED and independent:
         return clopper_pearson(round(value * tally.replicates), tally.replicates, level)
     tail = (1.0 - level) / 2.0
-    reach = float(stats.norm.isf(tail) if independent else stats.t.isf(tail, tally.units - 1)) * estimate.mc_se
+    reach = float(tails.norm.isf(tail) if independent else tails.t.isf(tail, tally.units - 1)) * estimate.mc_se
     bounds = (0.0, 1.0) if name in COUNTED else (-math.inf, math.inf)
     return max(value - reach, bounds[0]), min(value + reach, bounds[1])
 

@@ -9,8 +9,8 @@ from dataclasses import replace
 
 import numpy as np
 import pandas as pd
-from scipy import stats
 
+from withstand import tails
 from withstand.departures.world import World
 from withstand.engine.executors import open_executor
 from withstand.errors import ScenarioError
@@ -156,15 +156,15 @@ def detectable_effect_at(
     unit = focus.effect if focus.effect is not None and not focus.scalar else np.ones(1)
     A = grown.design.estimator(focus.L)
     spread = np.linalg.solve(A @ A.T, unit) @ unit
-    step = (stats.norm.isf(grown.alpha / 2.0) + stats.norm.ppf(DETECTED)) * grown.error_sd / math.sqrt(float(spread))
-    target = float(stats.norm.ppf(DETECTED))
+    step = (tails.norm.isf(grown.alpha / 2.0) + tails.norm.ppf(DETECTED)) * grown.error_sd / math.sqrt(float(spread))
+    target = float(tails.norm.ppf(DETECTED))
     tried: list[tuple[float, float]] = []
     factor = float(step)
     for _ in range(_STEPS):
         here = replace(focus, effect=factor * unit)
         answers = _answers(grown, n, procedure, here, condition, effort, executor)
         seen = reading(answers, "power")
-        tried.append((factor, float(stats.norm.ppf(min(max(seen.value, 1e-6), 1.0 - 1e-6)))))
+        tried.append((factor, float(tails.norm.ppf(min(max(seen.value, 1e-6), 1.0 - 1e-6)))))
         if abs(seen.value - DETECTED) <= (1e-9 if seen.exact else max(_CLOSE / 4.0, seen.se / 4.0)):
             return factor
         if len(tried) == 1:

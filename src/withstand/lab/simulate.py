@@ -6,8 +6,7 @@ import math
 from collections.abc import Iterable, Mapping
 from dataclasses import replace
 
-from scipy import stats
-
+from withstand import tails
 from withstand.engine.runner import Runner
 from withstand.engine.tally import Feature, Tally
 from withstand.lab.frames import Answer, CellAnswers
@@ -15,7 +14,7 @@ from withstand.lab.grid import Cell
 from withstand.measures.compute import CONFIDENCE, PROPORTIONS, Estimate, measure
 from withstand.measures.names import applicable_measures
 
-_REACH = float(stats.norm.isf((1.0 - CONFIDENCE) / 2.0))
+_REACH = float(tails.norm.isf((1.0 - CONFIDENCE) / 2.0))
 
 
 def tallies_of(runner: Runner, cells: Iterable[Cell]) -> dict[Cell, Tally]:

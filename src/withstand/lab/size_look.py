@@ -7,8 +7,7 @@ from concurrent.futures import Executor
 from contextlib import closing
 from dataclasses import dataclass, field, replace
 
-from scipy import stats
-
+from withstand import tails
 from withstand.engine.ledger import Ledger
 from withstand.judgement.size_points import LOOKS, Reading, Requirement
 from withstand.judgement.verdict import spending
@@ -141,7 +140,7 @@ class Look:
         """1 where it is clearly met, -1 where it clearly is not, else 0; the looks share the accepted chance of error."""
         seen = reading(found[self._key(requirement)], requirement.measure)
         chance = spending(self.effort.delta, look) / (LOOKS * len(self.requirements))
-        margin, reach = requirement.margin(seen.value), float(stats.norm.isf(chance / 2.0)) * seen.se
+        margin, reach = requirement.margin(seen.value), float(tails.norm.isf(chance / 2.0)) * seen.se
         return 1 if margin >= reach else -1 if margin < -reach else 0
 
 

@@ -7,8 +7,8 @@ from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
-from scipy import stats
 
+from withstand import tails
 from withstand.engine.job import Job, block_width
 from withstand.engine.noise import design_generator
 from withstand.lab.exactly import exact_answers
@@ -118,5 +118,5 @@ def _mean(seen: Sequence[float]) -> Answer:
     if se <= _SAME * max(abs(value), 1e-3):
         # The same in every table, as the coverage of OLS under normal errors is.
         return Answer(Estimate(value, 0.0, value, value, np.nan, np.nan), "exact", 0, 0)
-    reach = float(stats.t.isf(0.025, len(seen) - 1)) * se
+    reach = float(tails.t.isf(0.025, len(seen) - 1)) * se
     return Answer(Estimate(value, se, value - reach, value + reach, np.nan, np.nan), "averaged", len(seen), 0)

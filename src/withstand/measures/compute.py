@@ -13,8 +13,8 @@ from dataclasses import dataclass
 from functools import cache
 
 import numpy as np
-from scipy import stats
 
+from withstand import tails
 from withstand.engine.tally import FEATURES, Feature, Tally
 from withstand.study.design import Floats
 
@@ -212,8 +212,8 @@ def clopper_pearson(hits: float, count: int, level: float) -> tuple[float, float
         Confidence level.
     """
     tail = (1.0 - level) / 2.0
-    low = 0.0 if hits <= 0 else float(stats.beta.ppf(tail, hits, count - hits + 1))
-    high = 1.0 if hits >= count else float(stats.beta.isf(tail, hits + 1, count - hits))
+    low = 0.0 if hits <= 0 else float(tails.beta.ppf(tail, hits, count - hits + 1))
+    high = 1.0 if hits >= count else float(tails.beta.isf(tail, hits + 1, count - hits))
     return low, high
 
 
@@ -224,7 +224,7 @@ def _spread(gradient: Floats, covariance: Floats) -> float:
 @cache
 def _quantile(df: int) -> float:
     """Student's t; kept, since all measures of a look ask for the same one."""
-    return float(stats.t.isf((1.0 - CONFIDENCE) / 2.0, df))
+    return float(tails.t.isf((1.0 - CONFIDENCE) / 2.0, df))
 
 
 def _interval(name: str, value: float, se: float, tally: Tally) -> tuple[float, float]:

@@ -10,15 +10,15 @@ from abc import ABC, abstractmethod
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, fields
 from enum import StrEnum
-from typing import Any, ClassVar, TypeVar
+from typing import ClassVar
 
 import numpy as np
-from scipy import stats
 
-from withstand.errors import ScenarioError, nearest
+from withstand import tails
 from withstand.procedures.fit import Fit, WaldFit
 from withstand.procedures.forms import ResidualForm, evaluate_all
 from withstand.procedures.sample import Sample
+from withstand.registry import Registry
 from withstand.study.design import Design, Floats
 from withstand.study.focus import Focus, FocusKind
 
@@ -123,8 +123,8 @@ class LinearProcedure(Procedure):
         k = A.shape[0]
         df = self.degrees_of_freedom(design, A)
         if k == 1:
-            return float(stats.t.isf((1.0 - level) / 2.0, df))
-        return float(stats.f.isf(1.0 - level, k, df))
+            return float(tails.t.isf((1.0 - level) / 2.0, df))
+        return float(tails.f.isf(1.0 - level, k, df))
 
     def fitted_design(self, design: Design) -> Design:
         """The design actually fitted: with known weights, the weighted one."""
@@ -151,39 +151,13 @@ class LinearProcedure(Procedure):
         return fit
 
 
-T = TypeVar("T", bound=Procedure)
-
-REGISTRY: dict[str, type[Procedure]] = {}
-"""Every procedure by name, in the order of registration."""
-
-
-def register(cls: type[T]) -> type[T]:
-    """Class decorator: make a procedure known by its name."""
-    REGISTRY[cls.name] = cls
-    return cls
-
-
-def make_procedure(spec: str | Procedure, **options: Any) -> Procedure:
-    """A procedure from its name and options; a procedure is returned as it is.
-
-    Raises
-    ------
-    ScenarioError
-        If the name or an option is unknown; the message offers the nearest one.
-    """
-    if isinstance(spec, Procedure):
-        return spec
-    if spec not in REGISTRY:
-        raise ScenarioError(f"unknown procedure '{spec}'", where="procedures.use", remedy=nearest(spec, REGISTRY))
-    cls = REGISTRY[spec]
-    known = [f.name for f in fields(cls)]
-    for option in options:
-        if option not in known:
-            remedy = nearest(option, known) if known else "It takes no options."
-            raise ScenarioError(f"procedure '{spec}' has no option '{option}'", where="procedures.use", remedy=remedy)
-    return cls(**options)
-
-
 def pairwise(A: Floats) -> Floats:
     """Products a_i,t a_j,t of all pairs of rows of A (k, n), as (k, k, n)."""
     return np.asarray(A[:, None, :] * A[None, :, :])
+
+
+REGISTRY = Registry(Procedure, "procedure", "procedures.use")
+"""Every procedure by name, in the order of registration."""
+
+register = REGISTRY.register
+make_procedure = REGISTRY.make

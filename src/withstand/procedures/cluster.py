@@ -5,8 +5,8 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import stats
 
+from withstand import tails
 from withstand.procedures.base import LinearProcedure, register
 from withstand.procedures.forms import Grouped, ResidualForm
 from withstand.study.design import Design, Floats, Ints
@@ -116,7 +116,7 @@ class Cr2(ClusterRobust):
         if k == 1:
             return super().critical(design, A, level)
         eta = self._hotelling_degrees(design, A)
-        return float(stats.f.isf(1.0 - level, k, eta - k + 1) * eta / (eta - k + 1))
+        return float(tails.f.isf(1.0 - level, k, eta - k + 1) * eta / (eta - k + 1))
 
     def not_applicable(self, design: Design, focus: Focus) -> str | None:
         """See Procedure."""

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from functools import lru_cache
 
-from scipy import stats
+from withstand import tails
 
 
 @lru_cache(maxsize=256)
@@ -25,4 +25,4 @@ def student_critical(k: int, df: float, level: float) -> float:
     float
         Quantile of t(df), or of F(k, df).
     """
-    return float(stats.t.isf((1.0 - level) / 2.0, df)) if k == 1 else float(stats.f.isf(1.0 - level, k, df))
+    return float(tails.t.isf((1.0 - level) / 2.0, df)) if k == 1 else float(tails.f.isf(1.0 - level, k, df))

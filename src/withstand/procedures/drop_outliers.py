@@ -6,8 +6,8 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import stats
 
+from withstand import tails
 from withstand.errors import ScenarioError
 from withstand.procedures.base import Fitter, Procedure, register
 from withstand.procedures.fit import Fit, Flags, WaldFit
@@ -61,8 +61,8 @@ class DropOutliers(Procedure):
         bases = [design.basis_rows(focus.L) for focus in foci]
         # All numbers of deleted rows that leave a degree of freedom.
         degrees = np.arange(design.df, 0, -1)
-        t = stats.t.isf((1.0 - level) / 2.0, degrees)
-        criticals = [np.asarray(t if focus.scalar else stats.f.isf(1.0 - level, focus.k, degrees)) for focus in foci]
+        t = tails.t.isf((1.0 - level) / 2.0, degrees)
+        criticals = [np.asarray(t if focus.scalar else tails.f.isf(1.0 - level, focus.k, degrees)) for focus in foci]
 
         def fit(sample: Sample) -> list[Fit]:
             left = _refit(design, sample, self.beyond)

@@ -7,8 +7,8 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import stats
 
+from withstand import tails
 from withstand.procedures.base import Answer, Fitter, Procedure, register
 from withstand.procedures.fit import Fit, Flags, IntervalFit, wald_statistic
 from withstand.procedures.sample import Sample
@@ -79,8 +79,8 @@ class LogLink(Procedure):
     def prepare(self, design: Design, foci: Sequence[Focus], level: float) -> Fitter:
         """See Procedure."""
         bases = [design.basis_rows(focus.L) for focus in foci]
-        t = float(stats.t.isf((1.0 - level) / 2.0, design.df))
-        bounds = [float(stats.f.isf(1.0 - level, focus.k, design.df)) for focus in foci]
+        t = float(tails.t.isf((1.0 - level) / 2.0, design.df))
+        bounds = [float(tails.f.isf(1.0 - level, focus.k, design.df)) for focus in foci]
 
         def fit(sample: Sample) -> list[Fit]:
             y = sample.response

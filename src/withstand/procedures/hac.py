@@ -6,8 +6,8 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import stats
 
+from withstand import tails
 from withstand.errors import ScenarioError
 from withstand.procedures.base import LinearProcedure, register
 from withstand.procedures.fixed_b import bartlett_quantile
@@ -127,4 +127,4 @@ class HacCosine(LinearProcedure):
         k, nu = A.shape[0], self.cosines(design.n)
         if k == 1:
             return super().critical(design, A, level)
-        return float(stats.f.isf(1.0 - level, k, nu - k + 1) * nu / (nu - k + 1))
+        return float(tails.f.isf(1.0 - level, k, nu - k + 1) * nu / (nu - k + 1))

@@ -7,8 +7,8 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import stats
 
+from withstand import tails
 from withstand.procedures.absolute import least_absolute
 from withstand.procedures.base import Fitter, Procedure, register
 from withstand.procedures.critical import student_critical
@@ -33,8 +33,8 @@ def hall_sheather(n: int, level: float) -> float:
     n^(-1/3) z^(2/3) (1.5 phi(0)^2)^(1/3), z the normal quantile of the level (Hall & Sheather 1988); halved until it is below
     1/2, which matters up to 7 rows.
     """
-    z = float(stats.norm.isf((1.0 - level) / 2.0))
-    width = float(n ** (-1.0 / 3.0) * z ** (2.0 / 3.0) * (1.5 * stats.norm.pdf(0.0) ** 2) ** (1.0 / 3.0))
+    z = float(tails.norm.isf((1.0 - level) / 2.0))
+    width = float(n ** (-1.0 / 3.0) * z ** (2.0 / 3.0) * (1.5 * tails.norm.pdf(0.0) ** 2) ** (1.0 / 3.0))
     while width >= 0.5:
         width /= 2.0
     return width
@@ -53,7 +53,7 @@ def bandwidths(residuals: Floats, level: float) -> Floats:
     low, part = int(place), place - int(place)
     lower = ordered[:, low] + part * (ordered[:, low + 1] - ordered[:, low])
     upper = ordered[:, n - 1 - low] - part * (ordered[:, n - 1 - low] - ordered[:, n - 2 - low])
-    width = 2.0 * float(stats.norm.ppf(0.5 + hall_sheather(n, level)))
+    width = 2.0 * float(tails.norm.ppf(0.5 + hall_sheather(n, level)))
     return np.asarray(np.minimum(residuals.std(axis=1), (upper - lower) / _NORMAL_QUARTILES) * width)
 
 

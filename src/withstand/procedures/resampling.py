@@ -1,4 +1,4 @@
-"""Bootstraps that draw rows, or residuals, with replacement; percentile-t intervals."""
+"""Bootstraps that draw rows, or residuals, with replacement; percentile-t and percentile intervals."""
 
 from __future__ import annotations
 
@@ -8,6 +8,7 @@ from functools import partial
 
 import numpy as np
 
+from withstand.errors import ScenarioError
 from withstand.procedures.base import Fitter, Procedure, register
 from withstand.procedures.bootstrap import NO_LAW
 from withstand.procedures.fit import Fit, Flags, IntervalFit
@@ -26,6 +27,8 @@ from withstand.procedures.sample import Sample
 from withstand.procedures.sandwich import Hc1
 from withstand.study.design import Design, Floats, Ints
 from withstand.study.focus import Focus, FocusKind
+
+_INTERVALS = ("percentile-t", "percentile")
 
 _ROUNDS = 200
 """Rounds of drawing samples again before a slab of replicates counts as failed."""
@@ -86,25 +89,46 @@ def _signed_root(distance: Floats, variance: Floats) -> Floats:
 class PairsBootstrap(PercentileT):
     """Rows are drawn with replacement, predictors and response together; t statistics have HC1 errors.
 
+    Parameters
+    ----------
+    interval : {"percentile-t", "percentile"}
+        Ends from drawn t statistics, or plainly the order statistics of the drawn estimates, whose variance over the samples is
+        then the claimed one.
+
     Notes
     -----
     A sample of rows that leaves a coefficient or its variance undetermined (too few different rows, a level without rows) is
     drawn again.
     """
 
+    interval: str = "percentile-t"
+
     name = "pairs-bootstrap"
     title = "bootstrap of the rows"
     formula = "rows drawn with replacement; percentile-t with HC1 errors"
     source = "Freedman (1981); Efron & Tibshirani (1993)"
 
+    def __post_init__(self) -> None:
+        super().__post_init__()
+        if self.interval not in _INTERVALS:
+            raise ScenarioError(
+                f"interval is '{self.interval}'",
+                where=f"procedures.use: {self.name}.interval",
+                remedy=f"Give one of {', '.join(_INTERVALS)}.",
+            )
+
     def not_applicable(self, design: Design, focus: Focus) -> str | None:
         """See Procedure."""
+        if focus.kind is FocusKind.JOINT and self.interval == "percentile":
+            return "not applicable, because several coefficients at once have no percentile interval"
         return NO_LAW if focus.kind is FocusKind.NEW else None
 
     def prepare(self, design: Design, foci: Sequence[Focus], level: float) -> Fitter:
         """See Procedure."""
         tails, allowed = self.tails(level), allowed_exceedances(self.draws, 1.0 - level, self.name)
         bases = [design.basis_rows(focus.L) for focus in foci]
+        if self.interval == "percentile":
+            return partial(self._percentile, design, bases, tails)
         forms = [Hc1().form(design, design.estimator(focus.L)) for focus in foci]
 
         def fit(sample: Sample) -> list[Fit]:
@@ -130,6 +154,25 @@ class PairsBootstrap(PercentileT):
             return fits
 
         return fit
+
+    def _percentile(self, design: Design, bases: list[Floats], tails: int, sample: Sample) -> list[Fit]:
+        """Intervals between order statistics of the drawn estimates."""
+        last = self.draws - 1 - tails
+        found = [np.full((3, sample.width), np.nan) for _ in bases]
+        for part, rows in slabs(sample, self.name, partial(self._draw, design)):
+            if rows is None:
+                continue
+            c = rows.solved @ sample.residuals[:, part]
+            for basis, (low, high, claimed) in zip(bases, found, strict=True):
+                moved = np.einsum("p,pjr->rj", basis[0], c)
+                claimed[part] = moved.var(axis=1, ddof=1)
+                ordered = np.partition(moved, (tails, last), axis=1)
+                low[part], high[part] = ordered[:, tails], ordered[:, last]
+        estimates = [basis @ sample.projections for basis in bases]
+        return [
+            _interval(estimate, claimed, estimate[0] + low, estimate[0] + high)
+            for estimate, (low, high, claimed) in zip(estimates, found, strict=True)
+        ]
 
     def _rejects(
         self, design: Design, basis: Floats, sample: Sample, estimate: Floats, covariance: Floats, allowed: int, value: Floats

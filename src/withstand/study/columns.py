@@ -10,8 +10,8 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 
 import numpy as np
-from scipy import stats
 
+from withstand import tails
 from withstand.errors import ScenarioError, nearest
 from withstand.study.design import Floats
 
@@ -241,7 +241,7 @@ class Drawn(PlannedColumn):
             return np.exp(np.log(self.mean) - log_variance / 2.0 + np.sqrt(log_variance) * scores)
         if self.low is None or self.high is None:
             raise TypeError("a column is checked before it is drawn")
-        places = stats.norm.cdf(scores)
+        places = tails.norm.cdf(scores)
         if self.law == "integers":
             count = self.high - self.low + 1.0
             return np.asarray(self.low + np.minimum(np.floor(places * count), count - 1.0))

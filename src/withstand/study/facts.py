@@ -6,9 +6,9 @@ from dataclasses import asdict, dataclass
 from typing import Any
 
 import numpy as np
-from scipy import stats
 from scipy.linalg import solve_triangular
 
+from withstand import tails
 from withstand.study.design import Design, Floats
 from withstand.study.focus import FocusKind
 from withstand.study.study import Study
@@ -141,7 +141,7 @@ def focal_estimates(study: Study) -> list[dict[str, float]]:
     if study.residuals is None:
         return [{} for _ in study.focus]
     design, sd = _as_fitted(study, study.residuals)
-    critical = float(stats.t.isf(study.alpha / 2.0, design.df))
+    critical = float(tails.t.isf(study.alpha / 2.0, design.df))
     found: list[dict[str, float]] = []
     for focus in study.focus:
         if focus.k > 1:

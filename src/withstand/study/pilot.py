@@ -7,7 +7,6 @@ from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
-from scipy import stats
 
 from withstand.errors import TableError
 from withstand.study.columns import Drawn, Levels, PlannedColumn, Shares
