@@ -6,8 +6,8 @@ from pathlib import Path
 import withstand
 
 ORDER = [
-    "errors", "registry", "tails", "study", "departures", "procedures", "diagnostics", "exact", "engine", "measures", "judgement", "lab",
-    "report", "scenario", "front", "cli",
+    "errors", "registry", "tails", "study", "departures", "procedures", "diagnostics", "exact", "engine", "measures",
+    "judgement", "lab", "report", "scenario", "front", "cli",
 ]  # fmt: skip
 ROOT = Path(withstand.__file__).parent
 

@@ -9,6 +9,9 @@ from __future__ import annotations
 import difflib
 from collections.abc import Iterable
 
+_SHOWN = 400
+"""Letters kept at each end of a part of a message."""
+
 
 class WithstandError(Exception):
     """Base of every error this package raises on purpose."""
@@ -32,7 +35,8 @@ class InputError(WithstandError, ValueError):
         self.where = where
         self.remedy = remedy
         sentence = what if what.endswith((".", "?", "!")) else f"{what}."
-        super().__init__(f"{where}: {sentence} {remedy}".strip() if where else f"{sentence} {remedy}".strip())
+        parts = [_shortened(part) for part in (f"{where}:" if where else "", sentence, remedy) if part]
+        super().__init__(" ".join(parts))
 
     def __reduce__(self) -> tuple[object, ...]:
         return _rebuild, (type(self), self.what, self.where, self.remedy)
@@ -64,6 +68,11 @@ class NumericalError(WithstandError, ArithmeticError):
 
 def _rebuild(kind: type[InputError], what: str, where: str, remedy: str) -> InputError:
     return kind(what, where=where, remedy=remedy)
+
+
+def _shortened(text: str) -> str:
+    """Text that fits a screen: of a cell or name of many thousand letters, the beginning and the end say enough."""
+    return text if len(text) <= 2 * _SHOWN else f"{text[:_SHOWN]} […] {text[-_SHOWN:]}"
 
 
 def nearest(word: str, known: Iterable[str]) -> str:

@@ -10,6 +10,7 @@ from withstand.cli.commands import withstand as commands
 from withstand.departures import REGISTRY as DEPARTURES
 from withstand.judgement.tolerance import CRITERIA
 from withstand.measures.compute import MEASURES
+from withstand.measures.names import ADJUSTED_POWER, GIVEN_PASS
 from withstand.procedures import REGISTRY as PROCEDURES
 
 HEAVY = {"numpy", "scipy", "pandas", "matplotlib", "statsmodels", "pydantic", "formulaic", "jinja2"}
@@ -41,8 +42,8 @@ def test_every_command_and_option_is_explained(name):
 @pytest.mark.parametrize(
     ("what", "names", "key"),
     [
-        ("departures", DEPARTURES, "kind"), ("procedures", PROCEDURES, "name"), ("measures", MEASURES, "name"),
-        ("tolerances", CRITERIA, "name"),
+        ("departures", DEPARTURES, "kind"), ("procedures", PROCEDURES, "name"),
+        ("measures", [*MEASURES, ADJUSTED_POWER, *GIVEN_PASS.values()], "name"), ("tolerances", CRITERIA, "name"),
     ],
 )  # fmt: skip
 def test_lists_show_the_whole_registry(call, what, names, key):

@@ -5,6 +5,10 @@ import json
 import pandas as pd
 import pytest
 
+from withstand.lab.size_feared import feared_worlds
+from withstand.lab.size_plan import Condition
+from withstand.scenario.load import load_scenario
+
 PLAN = """title = "Two groups"
 
 [study]
@@ -118,12 +122,17 @@ def test_what_rows_buy(plan, call):
         (["--procedure", "hc9"], ["hc9"]),
         (["--procedure", "cr1"], ["cr1", "groups"]),
         (["--power", "80"], ["--power", "80", "0.8"]),
+        (["--power", "2"], ["--power", "2", "as in 0.9"]),
+        (["--plausible"], ["--plausible", "no residuals", "--severity"]),
         (["--half-width", "-1"], ["--half-width", "-1"]),
         (["--only"], ["nothing is asked"]),
         (["--on", "arm"], ["--on", "arm[b]"]),
         (["--range", "error_sd"], ["--range", "error_sd"]),
         (["--range", "sd=1,2"], ["sd", "error_sd"]),
         (["--at", "0"], ["--at", "0"]),
+        (["--at", "99999999999999999999"], ["--at", "99999999999999999999", "10,000,000"]),
+        (["--largest", "99999999999999999999"], ["--largest", "10,000,000"]),
+        (["--departure", "level-spread", "--severity", "2", "--along", "arm"], ["--departure", "a, b", "`noisy`", "scenario file"]),
         (["--growth", "copy"], ["--growth", "copy"]),
         (["--effect", "q=1"], ["'q'"]),
     ],
@@ -142,3 +151,28 @@ def test_power_without_an_effect_is_explained(folder, call):
     assert code == 2
     assert "without an effect" in err
     assert "--effect" in err
+
+
+def test_as_far_as_the_residuals_allow(folder, call):
+    """The ladder goes to a ratio of 4; what the residuals allow is asked about instead, and said."""
+    asked = ("size", "small.toml", "--only", "--power", 0.8, "--procedure", "ols", "--workers", 1, "--json")
+    ladder = json.loads(call(*asked)[1])
+    code, out, err = call(*asked, "--plausible")
+    assert (code, err) == (0, "")
+    worlds = json.loads(out)["worlds"]
+    assert ladder["worlds"] == ["fan along x, SD ratio 2", "fan along x, SD ratio 4", "skew, skewness 2"]
+    assert worlds != ladder["worlds"]
+    study, plan = load_scenario(folder / "small.toml").study, load_scenario(folder / "small.toml").plan
+    expected = feared_worlds(study, plan.axes, plan.procedures[:1], plan.seed)
+    assert worlds == [Condition(world).name for world in expected]
+
+
+def test_every_departure_there_is_as_far_as_the_residuals_allow(folder, call):
+    asked = ("size", "small.csv", "--model", "y ~ x", "--effect", "x=0.5", "--only", "--power", 0.8, "--workers", 1, "--json")
+    assert json.loads(call(*asked)[1])["worlds"] == ["nothing wrong"]
+    worlds = json.loads(call(*asked, "--plausible")[1])["worlds"]
+    for kind in ("fan along x", "skew", "worst-fan"):
+        assert any(world.startswith(kind) for world in worlds), kind
+    worlds = json.loads(call(*asked, "--plausible", "--departure", "fan", "--along", "x")[1])["worlds"]
+    assert worlds
+    assert all(world.startswith("fan along x, SD ratio") for world in worlds)

@@ -4,11 +4,12 @@ import numpy as np
 import pytest
 from scipy import optimize, special, stats
 
-from withstand.departures import World
+from withstand.departures import Curvature, World
 from withstand.errors import InputError, NumericalError
-from withstand.exact import can_be_exact, contour, coverage, detectable_effect, moments, path, power
+from withstand.exact import can_be_exact, closed, contour, coverage, detectable_effect, moments, path, power
 from withstand.exact.moments import Moments
 from withstand.exact.problem import pose
+from withstand.exact.tilt import Tilt
 from withstand.procedures import make_procedure
 from withstand.study.design import Design
 from withstand.study.focus import Focus, FocusKind, Point
@@ -16,6 +17,14 @@ from withstand.study.focus import Focus, FocusKind, Point
 from .cases import disturb, random_design
 
 OLS = make_procedure("ols")
+
+
+@pytest.fixture(autouse=True, params=["general", "closed form"])
+def route(request, monkeypatch):
+    """Every value is asked of the integrals too, which the closed form of the ideal model otherwise keeps from being asked."""
+    if request.param == "general":
+        monkeypatch.setattr(closed, "closed_form", lambda problem: None)
+    return request.param
 
 
 @pytest.fixture
@@ -183,7 +192,7 @@ def test_an_accuracy_that_is_not_reached_is_an_error(design, monkeypatch):
     monkeypatch.setattr(path, "_LEVELS", 1)
     monkeypatch.setattr(path, "_STEP", 4.0)
     with pytest.raises(NumericalError, match="was reached to"):
-        coverage(OLS, design, coefficient(design), ideal(design), 0.95)
+        coverage(make_procedure("hc3"), design, coefficient(design), ideal(design), 0.95)
 
 
 def test_questions_without_an_answer(design):
@@ -203,3 +212,23 @@ def test_reasons_against_exact_answers(design):
     assert can_be_exact(OLS, joint(design), ideal(design)) is None
     bare = Design(design.X, design.names)
     assert "no groups" in can_be_exact(make_procedure("cr1"), coefficient(bare), ideal(bare))
+
+
+def test_no_integral_at_the_very_end_of_its_range():
+    """The precision has eigenvalues 0.5 and 1, and at s = 0.25 nothing is left of the smaller one."""
+    precision = np.array([[[0.75, 0.25], [0.25, 0.75]]] * 3)
+    law = Tilt(np.zeros(3), precision, np.zeros((3, 2)))
+    found = law.log_integral(np.array([0.0, 0.25, 0.26]), np.zeros((1, 2)))[0]
+    assert found[0] == pytest.approx(-0.5 * np.log(0.5), rel=1e-12)
+    assert not np.isfinite(found[1:]).any()
+
+
+def test_a_bias_of_many_errors_that_inflates_the_interval_beyond_all_misses():
+    """The integral fails where the saddle is at the end of its range; Chernoff's bound says that there is nothing to find."""
+    lamp = np.tile([4.0, 8.0, 12.0, 16.0], 188)
+    design = Design(np.column_stack([np.ones(752), lamp]), ("Intercept", "lamp"), columns={"lamp": lamp})
+    disturbance = World(((Curvature(along="lamp"), 12.6),)).on(design)
+    found = coverage(make_procedure("hc2-bm"), design, Focus.coefficient("lamp", design.names), disturbance, 0.99)
+    assert found.coverage == 1.0
+    assert found.size < 1e-100
+    assert found.error < 1e-100

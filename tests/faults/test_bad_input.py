@@ -1,5 +1,6 @@
 """Bad input: one clear message that names the offending thing, exit status 2, and nothing written over."""
 
+import json
 import sqlite3
 
 import pytest
@@ -66,6 +67,12 @@ TABLES = {
     "contrast of unknown levels": (GOOD, ["--model", "y ~ C(g)", "--focus", "g[a] - g[q]"], ["q"]),
     "effect without a number": (GOOD, ["--model", "y ~ x", "--effect", "x"], ["--effect", "'x'"]),
     "effect of no focus": (GOOD, ["--model", "y ~ x", "--effect", "q=2"], ["q"]),
+    "factor of a focus that is infinite": (GOOD, ["--model", "y ~ x", "--focus", "1e400*x"], ["inf", "1e400*x", "1e+50"]),
+    "sum of a focus that would overflow": (GOOD, ["--model", "y ~ x", "--focus", "1e308*x + 1e308*x"], ["1e+308"]),
+    "term without a column": (GOOD, ["--model", "y ~ x + poly(x, 0)"], ["poly(x, 0)", "no column"]),
+    "factor with one level": (table([[*row[:2], "a"] for row in ROWS]), ["--model", "y ~ x + C(g)"], ["`g`", "no column"]),
+    "squares that overflow": (table([[f"{row[0]}e200", *row[1:]] for row in ROWS]), ["--model", "y ~ x"], ["1.2e+200", "row 2"]),
+    "quotient by zero": (with_cell(3, 1, "0"), ["--model", "y ~ I(1/x)"], ["row 5", "inf", "divisor"]),
     "level in percent": (GOOD, ["--model", "y ~ x", "--level", "95"], ["95", "--level"]),
     "few repetitions": (GOOD, ["--model", "y ~ x", "--repetitions", "5"], ["5", "--repetitions"]),
 }
@@ -97,6 +104,17 @@ SCENARIOS = {
     "departure twice": (scenario('[[departure]]\nkind = "skew"\n[[departure]]\nkind = "skew"'), ["skew", "twice"]),
     "procedure twice": (scenario('[procedures]\nuse = ["ols", "ols"]'), ["ols", "twice"]),
     "cap below the start": (scenario("[simulation]\nrepetitions = 5000\nmost = 1000"), ["most", "1000"]),
+    "departure twice in a stack": (
+        scenario('[[departure]]\nkind = "skew"\nwith = [{ kind = "fan", along = "x", severity = 2 }, '
+                 '{ kind = "fan", along = "x", severity = 3 }]'),
+        ["departure 1", "'fan along x' acts twice"],
+    ),
+    "step beyond all gaps": (
+        scenario('[[departure]]\nkind = "serial"\nstep = 1e200', 'order = "x"'),
+        ["departure 1", "1e+200", "longest gap"],
+    ),
+    "path with a zero byte": (scenario().replace("t.csv", "t\\u0000.csv"), ["t\\x00.csv", "null byte"]),
+    "no end of brackets": ("x = " + 3000 * "[" + 3000 * "]", ["s.toml", "nested too deeply"]),
     "no TOML": (scenario("[procedures"), ["not valid TOML", "line 5"]),
     "known weights without weights": (scenario('[procedures]\nuse = ["known-weights"]'), ["procedures.use 1", "known-weights"]),
     "missing table": (scenario().replace("t.csv", "missing.csv"), ["missing.csv", "no such file"]),
@@ -170,3 +188,46 @@ def test_report_of_a_folder_without_a_run(call, earlier, tmp_path):
     (tmp_path / "empty").mkdir()
     refused(call, earlier, ["report", "empty"], ["empty", "outputs/NAME"])
     refused(call, earlier, ["report", "nowhere"], ["nowhere"])
+
+
+def test_signs_that_would_steer_the_terminal_are_spelt_out(call, earlier, tmp_path):
+    (tmp_path / "t.csv").write_text(GOOD, encoding="utf-8")
+    refused(call, earlier, ["run", "t.csv", "--model", "y ~ x", "--focus", "\x1b[31mx\u202e"], ["'\\x1b[31mx\\u202e'"])
+
+
+def test_a_message_stays_short_whatever_it_quotes(call, earlier, tmp_path):
+    (tmp_path / "t.csv").write_text(with_cell(4, 1, 100_000 * "z"), encoding="utf-8")
+    refused(call, earlier, ["run", "t.csv", "--model", "y ~ x"], ["t.csv, row 6", "'zzz", "[…]", "C(x)"])
+    assert len(call("run", "t.csv", "--model", "y ~ x")[2]) < 2500
+    refused(call, earlier, ["run", "t.csv", "--model", f"y ~ {'x + ' * 300} q"], ["y ~ x + x", "'q'", "Known: g, x, y"])
+
+
+@pytest.mark.parametrize("name", ["-x", "a\tb", "a\nb", "a - b", "2*x", "<b>", "x²"])
+def test_any_column_name_is_its_own_focus(name, call, tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "t.csv").write_text(table(header=f'y,"{name}",g'), encoding="utf-8")
+    code, out, err = call("inspect", "t.csv", "--model", f"y ~ `{name}`", "--json")
+    assert (code, err) == (0, "")
+    assert f"{json.dumps(name, ensure_ascii=False)}" in out
+
+
+def test_a_column_called_fitted_is_left_to_the_fitted_mean(call, tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "t.csv").write_text(table(header="y,fitted,g"), encoding="utf-8")
+    code, out, err = call("inspect", "t.csv", "--model", "y ~ fitted")
+    assert (code, err) == (0, "")
+    assert "nothing was tried along your column 'fitted'" in " ".join(out.split())
+
+
+def test_line_ends_of_old_systems(call, tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "t.csv").write_bytes(GOOD.replace("\n", "\r").encode())
+    assert call("inspect", "t.csv", "--model", "y ~ x", "--quiet") == (0, "", "")
+
+
+def test_a_ladder_that_ends_where_nothing_is_wrong(call, tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "t.csv").write_text(GOOD, encoding="utf-8")
+    for ladder in ("[1]", "[2, 1]"):
+        (tmp_path / "s.toml").write_text(scenario(f'[[departure]]\nkind = "worst-fan"\nseverity = {ladder}'), encoding="utf-8")
+        assert call("inspect", "s.toml", "--quiet") == (0, "", "")

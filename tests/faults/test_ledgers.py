@@ -1,9 +1,12 @@
 """Ledgers that are not ours, not of this study, or damaged."""
 
+import json
 import sqlite3
 from contextlib import closing
 
 import pytest
+
+from withstand.report.store import FORMAT
 
 
 @pytest.fixture
@@ -59,6 +62,29 @@ def test_damaged_ledger(folder, call):
     assert (place / "measures.csv").is_file()
 
 
+def test_ledger_damaged_in_the_middle(finished, call):
+    """Whatever pages are lost, there is one message, and a fresh start works."""
+    ledger = finished / "ledger.sqlite"
+    whole = ledger.read_bytes()
+    codes = set()
+    for start in range(0, len(whole), max(len(whole) // 12, 1)):
+        ledger.write_bytes(whole[:start] + bytes(value ^ 0xFF for value in whole[start : start + 2000]) + whole[start + 2000 :])
+        code, _, err = call("run", "small.toml", "--out", finished, "--workers", 1, "--quiet")
+        codes.add(code)
+        assert (code == 0 and not err) or (code == 2 and err.startswith(f"withstand: {ledger}: "))
+        for ending in ("-wal", "-shm"):
+            ledger.with_name(ledger.name + ending).unlink(missing_ok=True)
+    assert 2 in codes
+    assert not (finished / "fault.txt").exists()
+
+
+def test_folder_in_the_place_of_the_ledger(folder, call):
+    place = folder / "taken"
+    (place / "ledger.sqlite").mkdir(parents=True)
+    refused(call, place, ["cannot be read"])
+    refused(call, place, ["cannot be removed", "--out"], "--fresh")
+
+
 def test_ledger_of_another_format(finished, call):
     with closing(sqlite3.connect(finished / "ledger.sqlite")) as base, base:
         base.execute("UPDATE about SET value = '999' WHERE key = 'format'")
@@ -77,4 +103,26 @@ def test_report_of_a_changed_run_is_refused(finished, call):
     code, _, err = call("report", finished)
     assert code == 2
     assert "measures.csv" in err
+    assert contents(finished) == before
+
+
+@pytest.mark.parametrize(
+    ("name", "text"),
+    [
+        ("run.json", '{"provenance": 3}'),
+        ("run.json", '{"format": FORMAT}'),
+        ("run.json", '{"format": FORMAT, "columns": {"measures": 5}}'),
+        ("verdicts.csv", '"'),
+        ("verdicts.csv", "HEADER\n1,2\n"),
+    ],
+)
+def test_report_of_a_damaged_folder(finished, folder, call, name, text):
+    (folder / "small.toml").unlink()
+    (finished / "scenario.toml").unlink()  # or the report would be made anew from the ledger
+    header = (finished / name).read_text(encoding="utf-8").splitlines()[0]
+    (finished / name).write_text(text.replace("FORMAT", json.dumps(FORMAT)).replace("HEADER", header), encoding="utf-8")
+    before = contents(finished)
+    code, out, err = call("report", finished)
+    assert (code, out) == (2, "")
+    assert err.startswith(f"withstand: {finished}")
     assert contents(finished) == before

@@ -134,6 +134,16 @@ def test_size_of_clean_study_is_the_textbook_one(frame):
     assert 20 * (enough - 1) < answer.n <= 20 * enough
 
 
+def test_size_over_what_the_residuals_allow(frame):
+    study = ws.Study.from_frame(frame, "y ~ x", focus=["x"], effect={"x": 0.5})
+    ladder = ws.size(study, ws.Fan((2.0, 40.0), along="x"), power=0.8, holds=False)
+    allowed = ws.size(study, ws.Fan((2.0, 40.0), along="x"), power=0.8, holds=False, plausible=True)
+    assert "fan along x, SD ratio 40" in ladder.worlds
+    assert "fan along x, SD ratio 40" not in allowed.worlds
+    assert ws.size(study, power=0.8, holds=False).worlds == ("nothing wrong",)
+    assert any(world.startswith("fan") for world in ws.size(study, power=0.8, holds=False, plausible=True, largest=40).worlds)
+
+
 def test_size_refuses_power_without_an_effect(frame):
     study = ws.Study.from_frame(frame, "y ~ x", focus=["x"])
     with pytest.raises(InputError, match=r"without an effect.*smallest effect that matters"):

@@ -140,3 +140,11 @@ def test_a_check_with_nothing_to_find_rejects_at_its_size(design, laws):
 
 def test_many_rows_are_given_fewer_replicates_but_never_too_few():
     assert [default_replicates(n) for n in (10, 500, 1000, 2000, 100_000)] == [4000, 4000, 2000, 1000, 1000]
+
+
+@pytest.mark.parametrize(("kind", "end"), [("fan", 30.0), ("serial", 0.98), ("clusters", 0.99), ("skew", 8.0)])
+def test_an_open_end_is_the_last_severity_tried_to_its_last_digit(laws, kind, end):
+    law = laws[kind]
+    found = law.plausible(float(np.median(law.values[-1])))
+    assert found.open_above
+    assert found.high == end

@@ -112,3 +112,29 @@ def test_wrong_verdicts_of_the_whole_search_stay_within_the_accepted_chance(trut
     assert settled > searches / 4
     # One side of a two-sided interval: at most delta/2 of the searches, give or take 5 standard errors.
     assert errors / searches <= delta / 2 + 5 * math.sqrt(delta / 2 * (1 - delta / 2) / searches)
+
+
+@pytest.mark.parametrize(
+    ("values", "measure"),
+    [
+        ({"coverage": 0.965, "bias_in_sd": 0.0}, "coverage"),  # more than is promised, and no bias at all
+        ({"coverage": 0.965, "bias_in_sd": -1e-16}, "coverage"),  # no bias but for rounding
+        ({"coverage": 0.948, "bias_in_sd": 0.02}, "coverage"),  # a fifth of one allowance against a twentieth of the other
+        ({"coverage": 0.948, "bias_in_sd": 0.2}, "bias_in_sd"),
+        ({"coverage": 0.965, "bias_in_sd": 0.2}, "bias_in_sd"),  # only the bias has spent anything of what it may
+    ],
+)
+def test_a_cell_that_holds_is_decided_by_what_is_nearest_to_giving(values, measure):
+    found = judge_exact(values, ASPECTS)
+    assert (found.verdict, found.deciding.measure) == (Verdict.HOLDS, measure)
+
+
+def test_a_bias_that_may_be_none_does_not_decide(counted):
+    # 3 % miss: an interval that covers more than it promises, and a bias of half its standard error.
+    found = judge(counted(10_000, 150, 150, bias=0.005), ASPECTS, 0.01, 1)
+    assert (found.verdict, found.deciding.measure, found.deciding.value) == (Verdict.HOLDS, "coverage", pytest.approx(0.97))
+
+
+def test_a_test_without_an_interval_is_decided_by_its_size(counted):
+    found = judge(counted(10_000, rejected=300, interval=False), ASPECTS, 0.01, 1)
+    assert (found.verdict, found.deciding.measure) == (Verdict.HOLDS, "size")

@@ -10,6 +10,7 @@ from withstand.departures.world import World
 from withstand.errors import InputError, ScenarioError
 from withstand.judgement.tolerance import Tolerance
 from withstand.lab.plan import Axis
+from withstand.lab.size_answer import ProcedureSize, SizeAnswer
 from withstand.lab.size_feared import feared_worlds
 from withstand.lab.size_plan import Effort, Targets
 from withstand.lab.size_question import noise_seed
@@ -243,6 +244,7 @@ def test_there_is_no_power_at_the_observed_effect():
     [
         (lambda: Targets(power=90), "--power", "0.9"),
         (lambda: Targets(power=1.0), "--power", "0.9"),
+        (lambda: Targets(power=2), "--power", "between 0 and 1, as in 0.9"),
         (lambda: Targets(power=-0.1), "--power", "0.9"),
         (lambda: Targets(half_width=0.0), "--half-width", "positive"),
         (lambda: Targets(holds=False), "size", "power"),
@@ -275,9 +277,21 @@ def test_worlds_as_far_as_the_residuals_allow():
     assert 1.0 < max(severities) < 40.0
     answer = size_study(study, procedures("hc3"), worlds, targets=Targets(power=0.8))
     assert answer.n >= 60
-    # A plan has no residuals: its ladder is taken as it is.
-    ladder = feared_worlds(lamp(), (Axis(Fan((1.5, 3.0), along="lamp")),), procedures("hc3"))
-    assert [one.stack[0][1] for one in ladder] == [1.5, 3.0]
+    with pytest.raises(InputError, match="a plan has no residuals"):
+        feared_worlds(lamp(), (Axis(Fan((1.5, 3.0), along="lamp")),), procedures("hc3"))
+
+
+def test_procedures_that_need_equally_few_rows_are_all_named():
+    def choice(*sizes):
+        some = tuple(ProcedureSize(f"p{i}", n) for i, n in enumerate(sizes))
+        answer = SizeAnswer("", "", (), some, pd.DataFrame(), "", 0.99)
+        return next((one for one in answer.sentences if one.startswith("The fewest rows")), None)
+
+    assert choice(120, 104) == "The fewest rows: p1, with 104."
+    assert choice(None, 104, 104) == "The fewest rows: p1 and p2, with 104."
+    assert choice(104, 104, 110, 104) == "The fewest rows: p0, p1 and p3, with 104."
+    assert choice(104) is None
+    assert choice(None, None) is None
 
 
 def test_the_record_is_plain():

@@ -101,3 +101,37 @@ def test_no_answer_at_all():
     assert found["failure_rate"].value == 1.0
     assert found["coverage"].value == 0.0
     assert "bias" not in found
+
+
+def test_given_an_answer_against_a_simulation_of_its_own():
+    """The failures are the replicates with the largest sample SD, so that those with an answer are another population."""
+    rng = np.random.default_rng(8)
+    count, t = 40_000, stats.t.isf(0.025, 4)
+
+    def drawn():
+        data = rng.standard_normal((5, count))
+        return data.mean(axis=0), data.var(axis=0, ddof=1) / 5
+
+    cut = stats.chi2.isf(0.4, 4) / 4 / 5
+    estimate, variance = drawn()
+    pair = np.zeros((2 * FEATURES, count))
+    for half, failed in ((0, variance > cut), (FEATURES, None)):
+        fit = WaldFit(estimate[None], failed, variance[None, None], t)
+        record(pair[half : half + FEATURES], fit, Questions(np.zeros(1), np.zeros(1), np.array([1.0])))
+    names = ["coverage", "size", "failure_rate", "coverage_given_answer", "size_given_answer"]
+    found = measure(Tally.of_block(pair, fresh=False), names)
+    other, spread = drawn()
+    kept = spread <= cut
+    covered = np.mean(np.abs(other[kept]) <= t * np.sqrt(spread[kept]))
+    given = found["coverage_given_answer"]
+    assert abs(given.value - covered) < 4.5 * np.hypot(given.mc_se, np.sqrt(covered * (1 - covered) / kept.sum()))
+    assert given.value == pytest.approx(found["coverage"].value / (1 - found["failure_rate"].value))
+    # Given the number of answers it is a plain proportion among them.
+    answered = np.sum(variance <= cut)
+    assert given.mc_se == pytest.approx(np.sqrt(given.value * (1 - given.value) / answered), rel=1e-3)
+    assert given.low < given.value < given.high <= 1.0
+    assert found["size_given_answer"].value == pytest.approx(1 - given.value)
+    # Against all replicates of the baseline, where nothing failed.
+    assert given.shift == pytest.approx(given.value - np.mean(np.abs(estimate) <= t * np.sqrt(variance)))
+    nothing = measure(Tally.of_block(np.vstack([np.ones((1, 50)), np.zeros((2 * FEATURES - 1, 50))]), fresh=False), names)
+    assert set(nothing) == {"coverage", "size", "failure_rate"}

@@ -1,8 +1,10 @@
+import dataclasses
 import io
 import re
 
 import matplotlib as mpl
 import numpy as np
+import pandas as pd
 import pytest
 from PIL import Image
 
@@ -89,6 +91,30 @@ def test_colours_differ_in_greyscale():
     # neighbours may be close, because markers differ as well; the range must be wide
     assert shades[-1] - shades[0] > 100
     assert len(set(MARKERS)) == len(COLOURS) == 6
+
+
+def test_failures_are_written_beside_the_procedure(rich):
+    drawn = figure(rich, "premium")
+    told = [text for axes in drawn.axes for text in axes.texts if "no answer" in text.get_text()]
+    assert [text.get_text() for text in told] == ["no answer in up to 0.37 %"]
+    names = [label.get_text() for label in drawn.axes[0].get_yticklabels()]
+    assert round(told[0].xy[1]) == names.index("huber")
+    without = dataclasses.replace(rich, measures=rich.measures[rich.measures["measure"] != "failure_rate"])
+    assert "no answer" not in as_svg(figure(without, "premium")).decode()
+
+
+def test_size_adjusted_power_is_drawn_where_there_is_some(rich):
+    def labels(outcome):
+        return [text.get_text() for legend in figure(outcome, "premium").legends for text in legend.get_texts()]
+
+    assert "power, size-adjusted" not in labels(rich)
+    table = rich.measures
+    row = table[(table["measure"] == "power") & (table["departure"] == "none") & (table["procedure"] == "hc3")].iloc[[0]]
+    more = pd.concat([table, row.assign(measure="size_adjusted_power", value=0.4321)], ignore_index=True)
+    outcome = dataclasses.replace(rich, measures=more)
+    assert "power, size-adjusted" in labels(outcome)
+    crosses = [line for line in figure(outcome, "premium").axes[1].lines if line.get_marker() == "x"]
+    assert [tuple(line.get_xydata()[0]) for line in crosses] == [(pytest.approx(43.21), View(rich).procedures.index("hc3"))]
 
 
 def test_what_there_is_no_figure_for_is_said(bare, rich):

@@ -5,8 +5,6 @@ from __future__ import annotations
 import sys
 from typing import Any
 
-from tqdm import tqdm
-
 
 class Bars:
     """One bar a phase; none where standard error is no terminal.
@@ -18,13 +16,16 @@ class Bars:
     """
 
     def __init__(self, quiet: bool = False) -> None:
-        self._disable = True if quiet else None
+        self._shown = not quiet and sys.stderr.isatty()
         self._bar: Any = None
 
     def phase(self, name: str, total: int) -> None:
         """Begin a phase of `total` steps."""
         self.close()
-        self._bar = tqdm(total=total, desc=name, file=sys.stderr, disable=self._disable, leave=False)
+        if self._shown:
+            from tqdm import tqdm
+
+            self._bar = tqdm(total=total, desc=name, file=sys.stderr, leave=False)
 
     def step(self, count: int = 1) -> None:
         """Advance by so many steps."""

@@ -59,6 +59,7 @@ def inspect(state: State, /, **options: Any) -> None:
 @click.option("--severity", "severities", metavar="NUMBER", type=float, multiple=True, help="One for each --departure.")
 @click.option("--along", metavar="COL", help="The column along which the spread or the mean departs.")
 @click.option("--together", is_flag=True, help="The departures act at once, as a stack, rather than each alone.")
+@click.option("--plausible", is_flag=True, help="Each departure as far as your residuals allow, rather than as stated.")
 @click.option("--procedure", "procedures", metavar="NAME", multiple=True, help="One, or several to find the cheapest.")
 @click.option("--power", type=float, help="Power at the smallest effect that matters, such as 0.9.")
 @click.option("--half-width", type=float, help="Largest mean half width of the interval.")

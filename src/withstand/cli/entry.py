@@ -13,6 +13,7 @@ from types import FrameType
 import click
 
 from withstand.cli.commands import withstand
+from withstand.cli.layout import visible
 from withstand.cli.state import State
 from withstand.errors import InputError, NumericalError
 
@@ -50,7 +51,8 @@ def status(arguments: Sequence[str] | None = None) -> int:
     except click.ClickException as error:
         context = getattr(error, "ctx", None)
         hint = f" See {context.command_path} --help." if context is not None else ""
-        return _say(f"{error.format_message().rstrip('.')}.{hint}", REFUSED)
+        told = " ".join(error.format_message().split())  # a list of choices comes in lines of its own
+        return _say(f"{told.rstrip('.')}.{hint}", REFUSED)
     except InputError as error:
         return _say(str(error), REFUSED, state)
     except (KeyboardInterrupt, click.Abort):
@@ -73,7 +75,7 @@ def _interrupt(number: int, frame: FrameType | None) -> None:
 def _say(message: str, code: int, state: State | None = None) -> int:
     if state is not None and state.debug:
         traceback.print_exc()
-    click.echo(f"withstand: {message}", err=True)
+    click.echo(visible(f"withstand: {message}"), err=True)
     return code
 
 

@@ -9,7 +9,7 @@ from typing import Any
 from withstand.cli.layout import columns
 from withstand.lab.outcome import Outcome
 from withstand.report.account import estimate_sentence
-from withstand.report.html import fact_tables, study_facts
+from withstand.report.facts import fact_tables, study_facts
 from withstand.report.screen import WIDTH, screen
 from withstand.report.view import View
 from withstand.report.words import number

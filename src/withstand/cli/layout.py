@@ -2,7 +2,19 @@
 
 from __future__ import annotations
 
+import unicodedata
 from collections.abc import Sequence
+
+
+def visible(text: str) -> str:
+    """Text that is safe for a terminal: signs that would steer it, such as an escape in a column name, are spelt out."""
+    return "".join(sign.encode("unicode_escape").decode("ascii") if sign != "\n" and _steers(sign) else sign for sign in text)
+
+
+def _steers(sign: str) -> bool:
+    """Controls, changes of the writing direction, and halves of signs, which cannot be printed."""
+    turns = unicodedata.bidirectional(sign) in ("LRE", "RLE", "LRO", "RLO", "PDF", "LRI", "RLI", "FSI", "PDI")
+    return turns or unicodedata.category(sign) in ("Cc", "Cs")
 
 
 def columns(rows: Sequence[Sequence[str]], left: Sequence[int] = (0,)) -> list[str]:

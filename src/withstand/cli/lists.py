@@ -7,8 +7,10 @@ import textwrap
 from typing import Any
 
 from withstand.departures import REGISTRY as DEPARTURES
+from withstand.departures import Departure, HeavyTails
 from withstand.judgement.tolerance import CRITERIA
 from withstand.measures.compute import MEASURES
+from withstand.measures.names import ADJUSTED_POWER, GIVEN_PASS
 from withstand.procedures import REGISTRY as PROCEDURES
 from withstand.scenario.options import parameter_texts
 
@@ -31,12 +33,19 @@ def listing(what: str, as_json: bool) -> str:
     return _lines([[str(cell) for cell in list(record.values())[:3]] for record in records])
 
 
+def _usual(cls: type[Departure]) -> list[str]:
+    """The default ladder; that of heavy tails, which is in tail indices, with the degrees of freedom it stands for."""
+    if cls is HeavyTails:
+        return [f"{value:.3g} ({1.0 / value:.3g} df)" for value in cls.default_ladder]
+    return [f"{value:.3g}" for value in cls.default_ladder]
+
+
 def _departures() -> list[dict[str, Any]]:
     return [
         {
             "kind": kind,
             "title": cls.title,
-            "severity": f"Severity: {cls.unit}; usual: {', '.join(f'{value:.3g}' for value in cls.default_ladder)}",
+            "severity": f"Severity: {cls.unit}; usual: {', '.join(_usual(cls))}",
             "unit": cls.unit,
             "default_ladder": list(cls.default_ladder),
             "layer": str(cls.layer),
@@ -63,7 +72,7 @@ def _procedures() -> list[dict[str, Any]]:
 
 
 def _measures() -> list[dict[str, Any]]:
-    return [{"name": name, "meaning": _MEANING[name]} for name in MEASURES]
+    return [{"name": name, "meaning": _MEANING[name]} for name in (*MEASURES, ADJUSTED_POWER, *GIVEN_PASS.values())]
 
 
 def _tolerances() -> list[dict[str, Any]]:
@@ -107,4 +116,10 @@ _MEANING = {
     "power": "share of tests that reject at the smallest effect that matters",
     "rmse": "root mean square error of the estimate",
     "failure_rate": "share of replicates in which the procedure gives no answer",
+    "coverage_given_answer": "coverage among the replicates with an answer, where some have none",
+    "size_given_answer": "size among the replicates with an answer, where some have none",
+    "pass_rate": "for rules that check first: share of replicates in which the check passed",
+    "coverage_given_pass": "for rules that check first: coverage where the check passed",
+    "size_given_pass": "for rules that check first: size where the check passed",
+    ADJUSTED_POWER: "power with the critical value that makes the size nominal, where the size is off",
 }

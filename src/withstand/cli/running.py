@@ -12,13 +12,14 @@ import click
 from withstand.cli.bars import Bars
 from withstand.cli.inputs import loaded_from
 from withstand.cli.inspection import inspection
+from withstand.cli.layout import visible
 from withstand.cli.speech import findings, say_findings, say_json
 from withstand.cli.state import State
 from withstand.front.folder import LEDGER
 from withstand.front.running import perform, report_again
 from withstand.lab.gather import Effort
 from withstand.lab.plan import Plan
-from withstand.report.write import PAGE
+from withstand.report.files import PAGE
 from withstand.scenario.load import load_scenario
 from withstand.study.study import Study
 
@@ -58,7 +59,7 @@ def inspect_input(state: State, input_path: Path, *, quiet: bool, as_json: bool,
         say_json(findings(result))
     elif not quiet:
         for line in inspection(result):
-            click.echo(line)
+            click.echo(visible(line))
 
 
 def report_folder(state: State, folder: Path, *, quiet: bool, as_json: bool) -> None:

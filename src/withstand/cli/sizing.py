@@ -15,7 +15,7 @@ import pandas as pd
 
 from withstand.cli.bars import Bars
 from withstand.cli.inputs import loaded_from
-from withstand.cli.layout import columns
+from withstand.cli.layout import columns, visible
 from withstand.cli.running import cores, default_folder
 from withstand.cli.speech import records, say_json
 from withstand.cli.state import State
@@ -36,7 +36,7 @@ from withstand.study.study import Study
 
 def size_input(
     state: State, input_path: Path, *, departures: Sequence[str], severities: Sequence[float], along: str | None,
-    together: bool, procedures: Sequence[str], ranges: Sequence[str], at: Sequence[int], power: float | None,
+    together: bool, plausible: bool, procedures: Sequence[str], ranges: Sequence[str], at: Sequence[int], power: float | None,
     half_width: float | None, only: bool, largest: int, growth: str | None, on: str | None, out: Path | None,
     workers: int | None, quiet: bool, as_json: bool, **options: Any,
 ) -> None:  # fmt: skip
@@ -45,18 +45,19 @@ def size_input(
     # What the defaults of `run` left out says nothing about this question.
     study = replace(loaded.study, notices=tuple(one for one in loaded.study.notices if one not in loaded.left_out))
     plan = loaded.plan
-    axes = _axes(loaded, departures, severities, along, together)
+    axes = _axes(loaded, departures, severities, along, together, plausible)
     chosen = several_procedures(list(procedures), study) if procedures else _own_procedures(loaded)
     effort = Effort(plan.seed, plan.repetitions, plan.most, largest, workers=workers or cores(), method=plan.method)
     state.out = folder = out or default_folder(loaded.name)
     if on is not None and on not in (names := [focus.name for focus in study.focus]):
         raise ScenarioError(f"'{on}' is not in the focus", where="--on", remedy=nearest(on, names))
     if at:
-        _say_table(rows_buy(study, axes, chosen, effort, at, focus=on, growth=growth), quiet, as_json)
+        _say_table(rows_buy(study, axes, chosen, effort, at, focus=on, growth=growth, plausible=plausible), quiet, as_json)
         return
     targets = Targets(not only, power, half_width)
     with _effect_is_an_option(), closing(Bars(quiet or as_json)) as bars:
-        common: dict[str, Any] = {"tolerance": plan.tolerance, "focus": on, "growth": growth, "progress": bars}
+        common: dict[str, Any] = {"tolerance": plan.tolerance, "focus": on, "growth": growth, "plausible": plausible}
+        common["progress"] = bars
         if ranges:
             corners = size_at_corners(study, axes, chosen, targets, effort, _ranges(ranges), **common)
             told = f"At the corners of the ranges: {' '.join(corners.sentences)}"
@@ -82,13 +83,18 @@ def _effect_is_an_option() -> Iterator[None]:
 
 
 def _axes(
-    loaded: Loaded, departures: Sequence[str], severities: Sequence[float], along: str | None, together: bool
+    loaded: Loaded, departures: Sequence[str], severities: Sequence[float], along: str | None, together: bool, plausible: bool
 ) -> tuple[Axis, ...]:
-    """The worlds asked about: those of the options, else those the scenario names, else nothing wrong."""
+    """What is asked about: the departures of the options, else those the scenario names, else nothing wrong.
+
+    Where the residuals say how far each may go, none need be named: then it is every departure that makes sense.
+    """
     if not departures:
         if severities or along or together:
             raise click.UsageError("--severity, --along and --together go with --departure")
-        return loaded.plan.axes if "departure" in loaded.record else ()
+        return loaded.plan.axes if plausible or "departure" in loaded.record else ()
+    if plausible and not severities and not together:
+        return tuple(Axis(_departure(kind, None, along, loaded.study)) for kind in departures)
     if len(severities) != len(departures):
         ladder = ", ".join(f"{value:g}" for value in departure_class(departures[0]).default_ladder)
         raise click.UsageError(
@@ -102,16 +108,20 @@ def _axes(
     return tuple(Axis(departure) for departure in made)
 
 
-def _departure(kind: str, severity: float, along: str | None, study: Study) -> Departure:
+def _departure(kind: str, severity: float | None, along: str | None, study: Study) -> Departure:
     cls = departure_class(kind)
-    options: dict[str, Any] = {"severity": severity}
+    options: dict[str, Any] = {} if severity is None else {"severity": severity}
     if along is not None and any(option.name == "along" for option in fields(cls)):
         options["along"] = along
     try:
         return fitting(cls(**options), study)
     except InputError as error:
-        where = f"--{error.where.removeprefix('departure.')}" if error.where.startswith("departure.") else "--departure"
-        raise type(error)(error.what, where=where, remedy=error.remedy) from error
+        key = error.where.removeprefix("departure.")
+        if key in ("severity", "along") or not error.where.startswith("departure."):
+            where, more = f"--{key}" if key in ("severity", "along") else "--departure", ""
+        else:
+            where, more = "--departure", f" There is no option for it: give `{key}` in a scenario file, which size takes as well."
+        raise type(error)(error.what, where=where, remedy=f"{error.remedy}{more}") from error
 
 
 def _own_procedures(loaded: Loaded) -> tuple[Any, ...]:
@@ -138,7 +148,7 @@ def _ranges(given: Sequence[str]) -> dict[str, list[float]]:
 def _say_answer(answer: SizeAnswer, written: Sequence[Path]) -> None:
     lines = [*_asked(answer), *(line for sentence in answer.sentences for line in _folded(f"* {sentence}"))]
     lines += [line for notice in answer.notices for line in _folded(f"Note: {notice}.")]
-    click.echo("\n".join([*lines, f"Everything that was looked at: {written[0]}"]))
+    click.echo(visible("\n".join([*lines, f"Everything that was looked at: {written[0]}"])))
 
 
 def _say_corners(corners: CornerAnswer, written: Sequence[Path], quiet: bool, as_json: bool) -> None:
@@ -146,7 +156,7 @@ def _say_corners(corners: CornerAnswer, written: Sequence[Path], quiet: bool, as
         say_json({"sentences": corners.sentences, "corners": corners.as_record(), "files": [str(path) for path in written]})
     elif not quiet:
         lines = [line for sentence in corners.sentences for line in _folded(f"* {sentence}")]
-        click.echo("\n".join([*_asked(corners.answers[0]), *lines, f"The first corner in full: {written[0]}"]))
+        click.echo(visible("\n".join([*_asked(corners.answers[0]), *lines, f"The first corner in full: {written[0]}"])))
 
 
 def _asked(answer: SizeAnswer) -> list[str]:
@@ -172,7 +182,7 @@ def _say_table(table: pd.DataFrame, quiet: bool, as_json: bool) -> None:
             ]
             for row in table.to_dict("records")
         ]  # fmt: skip
-        click.echo("\n".join(columns(shown, left=(1, 6))))
+        click.echo(visible("\n".join(columns(shown, left=(1, 6)))))
 
 
 def _share(value: float) -> str:

@@ -10,6 +10,7 @@ from typing import Any
 import click
 import pandas as pd
 
+from withstand.cli.layout import visible
 from withstand.lab.outcome import Outcome
 from withstand.report.plain import plain
 from withstand.report.screen import screen
@@ -20,7 +21,7 @@ def say_findings(outcome: Outcome, page: Path | None, quiet: bool, as_json: bool
     if as_json:
         say_json(findings(outcome) | {"page": None if page is None else str(page)})
     elif not quiet:
-        click.echo(screen(outcome, page), nl=False)
+        click.echo(visible(screen(outcome, page)), nl=False)
 
 
 def say_json(record: Any) -> None:

@@ -13,6 +13,7 @@ from abc import ABC, abstractmethod
 from collections.abc import Sequence
 from dataclasses import dataclass, fields
 from enum import StrEnum
+from functools import cached_property
 from typing import ClassVar, Protocol
 
 import numpy as np
@@ -132,7 +133,7 @@ class Departure(ABC):
         """The column it acts along, or empty."""
         return ""
 
-    @property
+    @cached_property
     def identity(self) -> str:
         """A text that names the departure with all its options but the severity; options left at their default are omitted."""
         options = [(option.name, getattr(self, option.name)) for option in fields(self) if option.name != "severity"]

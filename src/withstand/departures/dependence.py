@@ -131,6 +131,12 @@ class Serial(DependenceDeparture):
             row = int(np.flatnonzero((self._series(design).previous >= 0) & (self._series(design).gaps <= 0.0))[0])
             tie = f"two rows share the position {design.order[row]:g} in the order column, which would give them the same error"
             return tie, 'break the ties, or keep the series apart with groups and within = "groups"'
+        if gaps.max() < _WHOLE * self.step_length(design):
+            return (
+                f"one step of {self.step_length(design):g} is more than a million times the longest gap in the order column, "
+                "which would give all rows the same error",
+                "give a step of the size of the gaps, or leave it out",
+            )
         if severity < 0.0 and not _whole(gaps / self.step_length(design)):
             return (
                 f"the negative correlation {severity:g} has no power at gaps that are not whole numbers of steps",

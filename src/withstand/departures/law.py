@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from withstand.study.design import Floats
-from withstand.tails import norm
+from withstand.tails import normal_cdf, normal_pdf, normal_sf
 
 _LIMIT = 9.0
 """The table covers scores within +- this; beyond it (probability 2e-19 a draw) the last cell is extended linearly."""
@@ -68,7 +68,9 @@ class Law:
         return result
 
 
-def tabulate(name: str, quantile: Callable[[Floats], Floats], *, skewness: float, kurtosis: float) -> Law:
+def tabulate(
+    name: str, quantile: Callable[[Floats], Floats], *, skewness: float, kurtosis: float, symmetric: bool = False
+) -> Law:
     """Tabulate a law.
 
     Parameters
@@ -79,6 +81,8 @@ def tabulate(name: str, quantile: Callable[[Floats], Floats], *, skewness: float
         Maps normal scores z (any shape) to F^-1(Phi(z)), accurate in both tails; any location and scale.
     skewness, kurtosis : float
         Of the exact law.
+    symmetric : bool
+        Whether the quantiles are odd in z, so that one half of them is enough.
 
     Returns
     -------
@@ -92,7 +96,11 @@ def tabulate(name: str, quantile: Callable[[Floats], Floats], *, skewness: float
     E[z^2] = P + l phi(l) - u phi(u).
     """
     edges = np.linspace(-_LIMIT, _LIMIT, _CELLS + 1)
-    values = quantile(edges)
+    if symmetric:
+        upper = quantile(edges[_CELLS // 2 + 1 :])
+        values = np.concatenate([-upper[::-1], [0.0], upper])
+    else:
+        values = quantile(edges)
     slope = np.diff(values) / np.diff(edges)
     base = values[:-1] - slope * edges[:-1]
     mean, variance = _moments(edges, base, slope)
@@ -103,9 +111,9 @@ def tabulate(name: str, quantile: Callable[[Floats], Floats], *, skewness: float
 def _moments(edges: Floats, base: Floats, slope: Floats) -> tuple[float, float]:
     lower, upper = edges[:-1], edges[1:]
     # Survival functions in the upper half keep the small cell probabilities exact.
-    mass = np.where(lower >= 0, norm.sf(lower) - norm.sf(upper), norm.cdf(upper) - norm.cdf(lower))
-    first = norm.pdf(lower) - norm.pdf(upper)
-    second = mass + lower * norm.pdf(lower) - upper * norm.pdf(upper)
+    mass = np.where(lower >= 0, normal_sf(lower) - normal_sf(upper), normal_cdf(upper) - normal_cdf(lower))
+    first = normal_pdf(lower) - normal_pdf(upper)
+    second = mass + lower * normal_pdf(lower) - upper * normal_pdf(upper)
     mean = float(np.sum(base * mass + slope * first))
     square = float(np.sum(base**2 * mass + 2 * base * slope * first + slope**2 * second))
     return mean, square - mean**2

@@ -19,8 +19,13 @@ _SLIGHT = 0.01
 _NEAR_NORMAL = 1e-6
 """Below this tail index the inverse incomplete beta function has lost too many digits."""
 
-_HALVINGS = 60
-"""Bisections of a bracket; more than the 53 bits of a double."""
+_STEPS = 60
+"""Most steps within a bracket; halving alone would use up the 53 bits of a double."""
+
+_CLOSE = 1e-9
+"""Relative length of a last Newton step: the error left is of the order of its square."""
+
+_HALF_LOG_2PI = 0.5 * np.log(2.0 * np.pi)
 
 
 @lru_cache(maxsize=256)
@@ -28,7 +33,8 @@ def student(tail_index: float) -> Law:
     """Student's t with 1/tail_index degrees of freedom, standardised."""
     df = 1.0 / tail_index
     kurtosis = 3.0 + 6.0 / (df - 4.0) if df > 4.0 else np.inf
-    return tabulate(f"t with {df:g} df", lambda z: student_quantile(z, tail_index), skewness=0.0, kurtosis=kurtosis)
+    name = f"t with {df:g} df"
+    return tabulate(name, lambda z: student_quantile(z, tail_index), skewness=0.0, kurtosis=kurtosis, symmetric=True)
 
 
 @lru_cache(maxsize=256)
@@ -37,7 +43,7 @@ def contaminated(k: float, share: float) -> Law:
     variance = 1.0 - share + share * k**2
     kurtosis = 3.0 * (1.0 - share + share * k**4) / variance**2
     name = f"contaminated normal, {100.0 * share:g} % with SD {k:g}"
-    return tabulate(name, lambda z: contaminated_quantile(z, k, share), skewness=0.0, kurtosis=kurtosis)
+    return tabulate(name, lambda z: contaminated_quantile(z, k, share), skewness=0.0, kurtosis=kurtosis, symmetric=True)
 
 
 @lru_cache(maxsize=256)
@@ -77,17 +83,28 @@ def student_quantile(z: Floats, tail_index: float) -> Floats:
 
 
 def contaminated_quantile(z: Floats, k: float, share: float) -> Floats:
-    """Quantiles of (1 - share) N(0, 1) + share N(0, k^2) at Phi(z), by bisection of the log tail probability."""
+    """Quantiles of (1 - share) N(0, 1) + share N(0, k^2) at Phi(z).
+
+    Notes
+    -----
+    Newton's method on the log tail probability, within a bracket: the mixture's tail lies between those of its parts, so its
+    quantile lies between z and k z. A step that leaves the bracket is replaced by halving it.
+    """
     score = np.abs(z)
     target = log_ndtr(-score)
-    # The mixture's tail lies between those of its parts, so its quantile lies between z and k z.
-    low, high = score, k * score
+    low, high = score.copy(), k * score
     narrow, wide = np.log1p(-share), np.log(share)
-    for _ in range(_HALVINGS):
-        middle = 0.5 * (low + high)
-        beyond = np.logaddexp(narrow + log_ndtr(-middle), wide + log_ndtr(-middle / k)) > target
-        low, high = np.where(beyond, middle, low), np.where(beyond, high, middle)
-    return np.copysign(0.5 * (low + high), z)
+    x = score.copy()
+    for _ in range(_STEPS):
+        tail = np.logaddexp(narrow + log_ndtr(-x), wide + log_ndtr(-x / k))
+        low, high = np.where(tail > target, x, low), np.where(tail > target, high, x)
+        log_density = np.logaddexp(narrow - 0.5 * x**2, wide - np.log(k) - 0.5 * (x / k) ** 2) - _HALF_LOG_2PI
+        moved = x + (tail - target) * np.exp(tail - log_density)
+        moved = np.where((moved >= low) & (moved <= high), moved, 0.5 * (low + high))
+        step, x = np.abs(moved - x), moved
+        if np.all(step <= _CLOSE * x):
+            break
+    return np.copysign(x, z)
 
 
 def gamma_quantile(z: Floats, skewness: float) -> Floats:

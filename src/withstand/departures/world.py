@@ -43,12 +43,15 @@ class World:
     Raises
     ------
     ScenarioError
-        If two departures claim the law, or two the dependence.
+        If a departure comes twice, or two claim the law, or two the dependence.
     """
 
     stack: tuple[tuple[Departure, float], ...] = ()
 
     def __post_init__(self) -> None:
+        known = [departure.identity for departure, _ in self.stack]
+        if twice := [departure.name for departure, _ in self.stack if known.count(departure.identity) > 1]:
+            raise ScenarioError(f"'{twice[0]}' acts twice in a stack", where="departure.with", remedy="Keep one of them.")
         for layer, what in _SINGLE.items():
             names = [departure.kind for departure, _ in self.stack if departure.layer is layer]
             if len(names) > 1:

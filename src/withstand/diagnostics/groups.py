@@ -27,7 +27,7 @@ class GroupF(Diagnostic):
     def p_values(self, design: Design, values: Floats) -> Floats:
         """Upper tail of F, as if the residuals were independent."""
         count = design.group_count
-        return np.asarray(tails.f.sf(values, count - 1, design.n - count))
+        return np.asarray(tails.f_sf(values, count - 1, design.n - count))
 
     def prepare(self, design: Design) -> Statistic:
         """See Diagnostic."""

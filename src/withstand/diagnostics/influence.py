@@ -31,7 +31,7 @@ class LargestStudentised(Diagnostic):
 
     def p_values(self, design: Design, values: Floats) -> Floats:
         """Two-sided t, times the number of rows (Bonferroni)."""
-        return np.minimum(1.0, 2.0 * design.n * tails.t.sf(values, design.df - 1))
+        return np.minimum(1.0, 2.0 * design.n * tails.t_sf(values, design.df - 1))
 
     def prepare(self, design: Design) -> Statistic:
         """See Diagnostic."""

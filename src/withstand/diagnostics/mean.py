@@ -68,7 +68,7 @@ class AddedSquare(Diagnostic):
 
     def p_values(self, design: Design, values: Floats) -> Floats:
         """Two-sided t."""
-        return np.asarray(2.0 * tails.t.sf(np.abs(values), design.df - 1))
+        return np.asarray(2.0 * tails.t_sf(np.abs(values), design.df - 1))
 
     def prepare(self, design: Design) -> Statistic:
         """See Diagnostic."""
@@ -109,7 +109,7 @@ class Reset(Diagnostic):
 
     def p_values(self, design: Design, values: Floats) -> Floats:
         """Upper tail of F; exact under normal errors."""
-        return np.asarray(tails.f.sf(values, self.power - 1, self._denominator(design)))
+        return np.asarray(tails.f_sf(values, self.power - 1, self._denominator(design)))
 
     def prepare(self, design: Design) -> Statistic:
         """See Diagnostic."""

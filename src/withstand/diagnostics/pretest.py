@@ -254,5 +254,9 @@ class ChosenFit(Fit):
         """See Fit."""
         return np.where(self.first, self.one.rejects(value), self.other.rejects(value))
 
+    def ratio(self, value: Floats) -> Floats | None:
+        """See Fit."""
+        return self._pick(self.one.ratio(value), self.other.ratio(value))
+
     def _pick(self, one: Floats | None, other: Floats | None) -> Floats | None:
         return None if one is None or other is None else np.where(self.first, one, other)

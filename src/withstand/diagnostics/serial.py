@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from withstand import tails
 from withstand.departures.chain import Series
 from withstand.diagnostics.base import Diagnostic, Statistic, Tail, register
 from withstand.errors import ScenarioError
@@ -106,7 +107,7 @@ class Lags(Diagnostic):
 
     def p_values(self, design: Design, values: Floats) -> Floats:
         """Upper tail of chi-square with `lags` degrees of freedom."""
-        return np.asarray(stats.chi2.sf(values, self.lags))
+        return np.asarray(tails.chi2_sf(values, self.lags))
 
 
 @register

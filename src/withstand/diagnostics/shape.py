@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from withstand import tails
 from withstand.diagnostics.base import Diagnostic, Statistic, Tail, register
 from withstand.procedures.sample import Sample
 from withstand.study.design import Design, Floats
@@ -71,7 +72,7 @@ class JarqueBera(Diagnostic):
 
     def p_values(self, design: Design, values: Floats) -> Floats:
         """Upper tail of chi-square(2)."""
-        return np.asarray(stats.chi2.sf(values, 2))
+        return np.asarray(tails.chi2_sf(values, 2))
 
     def prepare(self, design: Design) -> Statistic:
         """See Diagnostic."""

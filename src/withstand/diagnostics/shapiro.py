@@ -87,6 +87,6 @@ class ShapiroWilk(Diagnostic):
             gamma = polyval(n, _SMALL_GAMMA)
             beyond = y >= gamma
             score = -np.log(np.where(beyond, 1.0, gamma - y))
-            p = tails.norm.sf(score, polyval(n, _SMALL_MEAN), np.exp(polyval(n, _SMALL_LOG_SD)))
+            p = tails.normal_sf(score, polyval(n, _SMALL_MEAN), np.exp(polyval(n, _SMALL_LOG_SD)))
             return np.where(beyond, 0.0, p)
-        return np.asarray(tails.norm.sf(y, polyval(np.log(n), _MEAN), np.exp(polyval(np.log(n), _LOG_SD))))
+        return np.asarray(tails.normal_sf(y, polyval(np.log(n), _MEAN), np.exp(polyval(np.log(n), _LOG_SD))))

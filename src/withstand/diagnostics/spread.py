@@ -67,7 +67,7 @@ class SquaredResiduals(Diagnostic):
 
     def p_values(self, design: Design, values: Floats) -> Floats:
         """Upper tail of chi-square with as many degrees of freedom as Z has columns."""
-        return np.asarray(stats.chi2.sf(values, self._basis(design).shape[1]))
+        return np.asarray(tails.chi2_sf(values, self._basis(design).shape[1]))
 
     def variables(self, design: Design) -> Floats:
         """Z, (n, m)."""
@@ -184,7 +184,7 @@ class GoldfeldQuandt(Diagnostic):
     def p_values(self, design: Design, values: Floats) -> Floats:
         """Upper tail of F."""
         low, high = self._degrees(design)
-        return np.asarray(tails.f.sf(values, high, low))
+        return np.asarray(tails.f_sf(values, high, low))
 
     def prepare(self, design: Design) -> Statistic:
         """See Diagnostic."""

@@ -91,9 +91,7 @@ class Kernel:
         return totals
 
     def _block(self, block: int, active: Active) -> dict[CellKey, list[Tally | None]]:
-        rows = self.job.study.rows
-        self._use(rows.draw(design_generator(self.job.seed, block)) if self._fresh else self.job.study.design)
-        noise = BlockNoise(self.job.seed, block, self.job.width, self._noise_buffers)
+        noise = self._open(block)
         wanted = sorted({procedure for procedures in active.values() for procedure in procedures})
         self._visit(BASELINE, wanted, noise)
         if active.keys() != {BASELINE}:
@@ -107,6 +105,12 @@ class Kernel:
                 self._visit(world, procedures, noise)
                 results |= {(world, procedure): self._tallies(procedure) for procedure in procedures}
         return results
+
+    def _open(self, block: int) -> BlockNoise:
+        """The noise of a block; its design becomes the current one."""
+        rows = self.job.study.rows
+        self._use(rows.draw(design_generator(self.job.seed, block)) if self._fresh else self.job.study.design)
+        return BlockNoise(self.job.seed, block, self.job.width, self._noise_buffers)
 
     def _use(self, design: Design) -> None:
         if design is not self._design:
@@ -166,12 +170,22 @@ class Kernel:
             elif ready.procedure.equivariant:
                 fits = ready.fitter(sample)
                 for j, fit in zip(ready.foci, fits, strict=True):
-                    record(self._pair(index, j)[:FEATURES], fit, self._questions(j, truths[j], disturbance))
+                    self._keep(index, j, fit, self._questions(j, truths[j], disturbance))
             else:
                 self._visit_separately(ready, index, sample, truths, disturbance)
             for j in range(len(self._foci)):
                 if j not in ready.foci and (index, j) not in self.job.refusals:
-                    record_failure(self._pair(index, j)[:FEATURES])
+                    self._keep_failure(index, j)
+
+    def _keep(
+        self, procedure: int, focus: int, fit: Fit, questions: Questions, sized: Fit | None = None, powered: Fit | None = None
+    ) -> None:
+        """Keep what is asked of the fits of one procedure and focal quantity in the current world."""
+        record(self._pair(procedure, focus)[:FEATURES], fit, questions, sized=sized, powered=powered)
+
+    def _keep_failure(self, procedure: int, focus: int) -> None:
+        """Keep that the procedure had no answer in the whole block."""
+        record_failure(self._pair(procedure, focus)[:FEATURES])
 
     def _truth(self, focus: Focus, disturbance: Disturbance, noise: BlockNoise) -> Floats:
         truth = disturbance.target_shift(focus)
@@ -214,7 +228,7 @@ class Kernel:
                 else:
                     alternative = None
             questions = Questions(truth, null, alternative, unit=study.error_sd)
-            record(self._pair(index, j)[:FEATURES], reference[position], questions, sized=sized, powered=powered)
+            self._keep(index, j, reference[position], questions, sized, powered)
 
     def _at(self, sample: Sample, coefficients: Floats) -> Sample:
         # Without shared buffers: the fits of several coefficient vectors are alive together, and their tests look back.

@@ -9,16 +9,19 @@ import signal
 from collections.abc import Iterator
 from concurrent.futures import Executor, Future, ProcessPoolExecutor
 from contextlib import contextmanager
-from typing import Any
+from typing import Any, TypeVar
 
 from threadpoolctl import threadpool_limits
 
 from withstand.engine.block import Active, CellKey, Kernel
 from withstand.engine.job import Job
+from withstand.engine.ratios import RatioKernel, Ratios
 from withstand.engine.tally import Tally
 from withstand.errors import InputError
 
 Results = dict[CellKey, list[Tally | None]]
+
+K = TypeVar("K", bound=Kernel)
 
 _kernels: dict[str, Kernel] = {}
 """One kernel a process, kept between tasks of the same job."""
@@ -61,13 +64,29 @@ def run_task(job: Job | bytes, token: str, task: int, active: Active) -> Results
     active : mapping
         Procedures to judge, by world.
     """
-    if token not in _kernels:
-        _kernels.clear()
-        _kernels[token] = Kernel(pickle.loads(job) if isinstance(job, bytes) else job)
-    kernel = _kernels[token]
-    first = task * kernel.job.blocks_per_task
+    kernel = _kernel(Kernel, job, token)
     with threadpool_limits(1):
-        return kernel.run(range(first, first + kernel.job.blocks_per_task), active)
+        return kernel.run(_blocks(kernel, task), active)
+
+
+def run_ratios(job: Job | bytes, token: str, task: int, active: Active) -> Ratios:
+    """The ratios of one task, as `run_task`."""
+    kernel = _kernel(RatioKernel, job, token)
+    with threadpool_limits(1):
+        return kernel.ratios(_blocks(kernel, task), active)
+
+
+def _kernel(kind: type[K], job: Job | bytes, token: str) -> K:
+    known = _kernels.get(token)
+    if not isinstance(known, kind):
+        _kernels.clear()
+        known = _kernels[token] = kind(pickle.loads(job) if isinstance(job, bytes) else job)
+    return known
+
+
+def _blocks(kernel: Kernel, task: int) -> range:
+    first = task * kernel.job.blocks_per_task
+    return range(first, first + kernel.job.blocks_per_task)
 
 
 class InProcess(Executor):

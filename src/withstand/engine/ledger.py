@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import sqlite3
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -20,6 +21,10 @@ CREATE TABLE IF NOT EXISTS tallies (
     job TEXT NOT NULL, world TEXT NOT NULL, procedure TEXT NOT NULL,
     tasks INTEGER NOT NULL, applies TEXT NOT NULL, sums BLOB NOT NULL,
     PRIMARY KEY (job, world, procedure)
+) STRICT;
+CREATE TABLE IF NOT EXISTS numbers (
+    job TEXT NOT NULL, world TEXT NOT NULL, procedure TEXT NOT NULL, name TEXT NOT NULL, numbers BLOB NOT NULL,
+    PRIMARY KEY (job, world, procedure, name)
 ) STRICT;
 """
 
@@ -65,14 +70,12 @@ class Ledger:
         except sqlite3.Error as error:
             raise self._unreadable(error) from error
         try:
-            # Looked at before anything is changed, the journal's mode included: it may be someone else's database.
-            self._refuse_foreign()
-            self._db.execute("PRAGMA journal_mode=WAL")
-            self._db.executescript(_SCHEMA)
-            self._db.execute("INSERT OR IGNORE INTO about VALUES ('format', ?)", (_FORMAT,))
-        except sqlite3.Error as error:
-            self._db.close()
-            raise self._unreadable(error) from error
+            with self._readable():
+                # Looked at before anything is changed, the journal's mode included: it may be someone else's database.
+                self._refuse_foreign()
+                self._db.execute("PRAGMA journal_mode=WAL")
+                self._db.executescript(_SCHEMA)
+                self._db.execute("INSERT OR IGNORE INTO about VALUES ('format', ?)", (_FORMAT,))
         except LedgerError:
             self._db.close()
             raise
@@ -93,7 +96,17 @@ class Ledger:
                 remedy="Start over with --fresh or give another folder with --out.",
             )
 
-    def _unreadable(self, error: sqlite3.Error) -> LedgerError:
+    @contextmanager
+    def _readable(self) -> Iterator[None]:
+        """Complain about a damaged file wherever that comes to light: bad pages, bad text, tallies of a wrong length."""
+        try:
+            yield
+        except LedgerError:
+            raise
+        except (sqlite3.Error, ValueError) as error:
+            raise self._unreadable(error) from error
+
+    def _unreadable(self, error: Exception) -> LedgerError:
         return LedgerError(
             f"the ledger cannot be read ({error})",
             where=self._where,
@@ -108,8 +121,9 @@ class Ledger:
         LedgerError
             If it already belongs to another.
         """
-        self._db.execute("INSERT OR IGNORE INTO about VALUES ('owner', ?)", (owner,))
-        found = self._db.execute("SELECT value FROM about WHERE key = 'owner'").fetchone()[0]
+        with self._readable():
+            self._db.execute("INSERT OR IGNORE INTO about VALUES ('owner', ?)", (owner,))
+            found = self._db.execute("SELECT value FROM about WHERE key = 'owner'").fetchone()[0]
         if found != owner:
             raise LedgerError(
                 "the ledger belongs to another study, seed or version of the data",
@@ -119,15 +133,16 @@ class Ledger:
 
     def read(self, key: LedgerKey) -> Entry:
         """The entry of a key; zero tasks if there is none."""
-        row = self._db.execute(
-            "SELECT tasks, applies, sums FROM tallies WHERE job = ? AND world = ? AND procedure = ?", key
-        ).fetchone()
-        if row is None:
-            return Entry(0, [])
-        tasks, applies, blob = row
-        flat: Floats = np.frombuffer(blob, dtype="<f8")
-        parts = iter(flat.reshape(applies.count("1"), -1) if "1" in applies else [])
-        return Entry(tasks, [Tally.unpack(next(parts)) if flag == "1" else None for flag in applies])
+        with self._readable():
+            row = self._db.execute(
+                "SELECT tasks, applies, sums FROM tallies WHERE job = ? AND world = ? AND procedure = ?", key
+            ).fetchone()
+            if row is None:
+                return Entry(0, [])
+            tasks, applies, blob = row
+            flat: Floats = np.frombuffer(blob, dtype="<f8")
+            parts = iter(flat.reshape(applies.count("1"), -1) if "1" in applies else [])
+            return Entry(tasks, [Tally.unpack(next(parts)) if flag == "1" else None for flag in applies])
 
     def write(self, entries: Mapping[LedgerKey, Entry]) -> None:
         """Store entries in one transaction.
@@ -137,7 +152,7 @@ class Ledger:
         LedgerError
             If the disk is full or the file cannot be written.
         """
-        rows = [
+        rows: list[tuple[object, ...]] = [
             (
                 *key,
                 entry.tasks,
@@ -146,9 +161,31 @@ class Ledger:
             )
             for key, entry in entries.items()
         ]
+        self._store("INSERT OR REPLACE INTO tallies VALUES (?, ?, ?, ?, ?, ?)", rows)
+
+    def numbers(self, key: LedgerKey, name: str) -> tuple[float, ...] | None:
+        """Finished numbers that do not add up over tasks; None where there are none yet."""
+        with self._readable():
+            row = self._db.execute(
+                "SELECT numbers FROM numbers WHERE job = ? AND world = ? AND procedure = ? AND name = ?", (*key, name)
+            ).fetchone()
+            return None if row is None else tuple(np.frombuffer(row[0], dtype="<f8").tolist())
+
+    def write_numbers(self, name: str, found: Mapping[LedgerKey, Sequence[float]]) -> None:
+        """Store finished numbers in one transaction.
+
+        Raises
+        ------
+        LedgerError
+            If the disk is full or the file cannot be written.
+        """
+        rows = [(*key, name, np.asarray(values, dtype="<f8").tobytes()) for key, values in found.items()]
+        self._store("INSERT OR REPLACE INTO numbers VALUES (?, ?, ?, ?, ?)", rows)
+
+    def _store(self, statement: str, rows: Sequence[tuple[object, ...]]) -> None:
         try:
             self._db.execute("BEGIN IMMEDIATE")
-            self._db.executemany("INSERT OR REPLACE INTO tallies VALUES (?, ?, ?, ?, ?, ?)", rows)
+            self._db.executemany(statement, rows)
             self._db.execute("COMMIT")
         except sqlite3.Error as error:
             if self._db.in_transaction:

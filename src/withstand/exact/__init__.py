@@ -6,7 +6,7 @@ tilted laws of `tilt` without an n x n matrix; `contour` and `path` integrate th
 
 from withstand.exact.coverage import ExactResult, coverage
 from withstand.exact.moments import Moments, moments
-from withstand.exact.power import detectable_effect, power
+from withstand.exact.power import adjusted_power, detectable_effect, power
 from withstand.exact.structure import can_be_exact
 
-__all__ = ["ExactResult", "Moments", "can_be_exact", "coverage", "detectable_effect", "moments", "power"]
+__all__ = ["ExactResult", "Moments", "adjusted_power", "can_be_exact", "coverage", "detectable_effect", "moments", "power"]

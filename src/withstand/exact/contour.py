@@ -102,20 +102,20 @@ class Inverter:
         exists = np.isfinite(log_mgf(found, grid, np.zeros((1, self.problem.k)))[0])
         return grid[exists], found.at(np.flatnonzero(exists))
 
-    def _saddles(self, d: Floats) -> Ints:
-        """For each effect (E, k) the candidate at which E[exp(s Q)]/|s| is least."""
+    def _saddles(self, d: Floats) -> tuple[Ints, Floats]:
+        """For each effect (E, k) the candidate at which E[exp(s Q)]/|s| is least, and the logarithm of that."""
         for _ in range(_EXTENSIONS):
             heights = log_mgf(self._grid_tilt, self._grid, d).real - np.log(np.abs(self._grid))
             best = np.argmin(np.where(np.isnan(heights), np.inf, heights), axis=1)
-            least = np.abs(self._grid).min()
-            if np.all(np.abs(self._grid[best]) > least):
+            innermost = np.abs(self._grid).min()
+            if np.all(np.abs(self._grid[best]) > innermost):
                 break
             # Far effects, or a bias of many SDs, have their saddle close to 0.
-            finer = least * np.exp2(-np.arange(1.0, 9.0))
+            finer = innermost * np.exp2(-np.arange(1.0, 9.0))
             finer = np.concatenate([-finer, finer])
             self._grid = np.concatenate([self._grid, finer])
             self._grid_tilt = join([self._grid_tilt, self.tilt(finer)])
-        return best
+        return best, heights[np.arange(len(d)), best]
 
     def probabilities(self, effects: Floats, *, sides: bool = False) -> Probabilities:
         """Probabilities that the test rejects.
@@ -135,10 +135,15 @@ class Inverter:
         d = self.problem.shift + effects
         values = np.empty((3, len(d)))
         error = np.empty(len(d))
-        best = self._saddles(d)
+        best, least = self._saddles(d)
         for index in np.unique(best):
             chosen = best == index
             values[:, chosen], error[chosen] = self._integrate(float(self._grid[index]), d[chosen], sides)
+        # Chernoff's bound: P(Q > 0) <= E[exp(c Q)] for c > 0, and likewise below 0. Where an integral fails at the edge of what
+        # exists or of what can be written down, the probability is mostly zero to more decimals than are wanted.
+        bound = np.exp(np.minimum(least + np.log(np.abs(self._grid[best])), 0.0))
+        nothing = ~(error <= WANTED) & (bound <= WANTED)
+        values[:, nothing], error[nothing] = 0.0, bound[nothing]
         if not np.all(error <= WANTED):
             raise NumericalError(
                 f"an exact probability was reached to {np.nan_to_num(error, nan=np.inf).max():.1e} only, with {WANTED:.0e} "

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from withstand.departures.world import Disturbance
-from withstand.exact.contour import Inverter
+from withstand.exact.closed import ClosedForm, answering_for
 from withstand.exact.moments import expected_claim
 from withstand.exact.problem import pose
 from withstand.exact.width import expected_root
@@ -91,16 +91,17 @@ def coverage(
     its part on one side is known in closed form at every node of the contour.
     """
     problem = pose(procedure, design, focus, disturbance, level)
-    inverter = Inverter(problem)
     scalar = focus.scalar
-    found = inverter.probabilities(np.zeros((1, problem.k)), sides=scalar)
-    powers = None
-    if effects is not None:
-        shaped = np.asarray(effects, dtype=np.float64).reshape(-1, problem.k)
-        powers = inverter.probabilities(problem.to_unit(shaped)).beyond
+    wanted = None if effects is None else problem.to_unit(np.asarray(effects, dtype=np.float64).reshape(-1, problem.k))
+    answering = answering_for(problem, wanted)
+    found = answering.probabilities(np.zeros((1, problem.k)), sides=scalar)
+    powers = None if wanted is None else answering.probabilities(wanted).beyond
     length = None
     if scalar and width:
-        root = expected_root(problem, inverter.structure, expected_claim(problem))
+        if isinstance(answering, ClosedForm):
+            root = answering.expected_root()
+        else:
+            root = expected_root(problem, answering.structure, expected_claim(problem))
         length = 2.0 * problem.critical * float(problem.T[0, 0]) * root
     return ExactResult(
         coverage=float(found.within[0]),

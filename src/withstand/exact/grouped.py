@@ -47,41 +47,48 @@ class RowSums:
         self._spread = spread[order]
         self._starts = None if codes is None else np.flatnonzero(np.diff(codes[order], prepend=-1))
         self._pairs = np.triu_indices(columns.shape[1])
+        self._products: Floats | None = None
 
     def pieces(self, theta: Values) -> Pieces:
         """See Structure."""
         r, p, t = self._columns.shape[1], self._p, theta.size
         log_determinant = np.zeros(t, dtype=theta.dtype)
         packed = np.zeros((len(self._pairs[0]), 3, t), dtype=theta.dtype)
-        A, B, C = (np.zeros(shape, dtype=theta.dtype) for shape in ((r, r, t), (r, p, t), (p, p, t)))
+        between = np.zeros((r + p, r + p, t), dtype=theta.dtype)
         for rows, starts in self._chunks(t):
             d, s, columns = self._d[rows], self._spread[rows], self._columns[rows]
-            delta = (s**2 * d)[:, None] * theta
-            inner = 1.0 + (1.0 - self._icc) * delta
+            inner = 1.0 + ((1.0 - self._icc) * s**2 * d)[:, None] * theta
             log_determinant += np.log(inner).sum(axis=0)
             weights = np.empty((d.size, 3, t), dtype=theta.dtype)
             omega = np.divide(1.0, inner, out=weights[:, 1])
             np.multiply(d[:, None] * theta, omega, out=weights[:, 0])
             np.multiply(((1.0 - self._icc) * s**2)[:, None], omega, out=weights[:, 2])
-            table = columns[:, self._pairs[0]] * columns[:, self._pairs[1]]
-            flat = table.T @ weights.reshape(d.size, -1).view(np.float64)
+            flat = self._table(rows).T @ weights.reshape(d.size, -1).view(np.float64)
             packed += flat.view(theta.dtype).reshape(packed.shape)
             if starts is not None:
-                shared = 1.0 + self._icc * np.add.reduceat(delta * omega, starts, axis=0)
+                shared = 1.0 + self._icc * np.add.reduceat((s**2)[:, None] * weights[:, 0], starts, axis=0)
                 log_determinant += np.log(shared).sum(axis=0)
                 left = self._group_sums(columns, s[:, None] * weights[:, 0], starts)
                 right = self._group_sums(columns[:, :p], s[:, None] * omega, starts)
-                scaled = self._icc / shared.T
-                A -= _outer(left, left, scaled)
-                B -= _outer(left, right, scaled)
-                C += _outer(right, right, scaled)
-        for position, full in enumerate((A, B, C)):
-            for (i, j), value in zip(np.transpose(self._pairs), packed[:, position], strict=True):
-                if i < full.shape[0] and j < full.shape[1]:
-                    full[i, j] += value
-                if i != j and j < full.shape[0] and i < full.shape[1]:
-                    full[j, i] += value
+                sums = np.concatenate([left, right], axis=1)
+                between += ((sums * (self._icc / shared.T)[:, None, :]) @ sums.transpose(0, 2, 1)).transpose(1, 2, 0)
+        full = np.empty((r, r, 3, t), dtype=theta.dtype)
+        full[self._pairs] = packed
+        full[self._pairs[::-1]] = packed
+        A, B, C = full[:, :, 0], full[:, :p, 1], full[:p, :p, 2]
+        if self._starts is not None:
+            A, B, C = A - between[:r, :r], B - between[:r, r:], C + between[r:, r:]
         return Pieces(log_determinant, A, B, C)
+
+    def _table(self, rows: slice) -> Floats:
+        """Products of two columns (rows, pairs); kept where all rows are handled at once."""
+        if self._products is not None:
+            return self._products[rows]
+        columns = self._columns[rows]
+        table = columns[:, self._pairs[0]] * columns[:, self._pairs[1]]
+        if len(columns) == self._d.size:
+            self._products = table
+        return table
 
     def _group_sums(self, columns: Floats, weights: Values, starts: Ints) -> Values:
         """Sums of weight times column over groups, (t, m, G)."""
@@ -102,8 +109,3 @@ class RowSums:
             last = max(first + 1, int(np.searchsorted(bounds, bounds[first] + size, side="right")) - 1)
             yield slice(int(bounds[first]), int(bounds[last])), self._starts[first:last] - bounds[first]
             first = last
-
-
-def _outer(left: Values, right: Values, weights: Values) -> Values:
-    """Sum over groups of weight * left * right', (l, r, t) from (t, l, G), (t, r, G), (t, G)."""
-    return np.moveaxis((left * weights[:, None, :]) @ right.transpose(0, 2, 1), 0, 2)

@@ -63,13 +63,13 @@ class Moments:
             2 Phi(z * se_ratio) - 1 where the estimate is unbiased, 0 where a bias stays while the SD vanishes. For a new
             response, whose SD stays, the bias counts in SDs. The limit for a new response holds for normal errors.
         """
-        z = float(tails.norm.isf((1.0 - level) / 2.0)) * self.se_ratio
+        z = float(tails.normal_isf((1.0 - level) / 2.0)) * self.se_ratio
         bias = self.bias / math.sqrt(self.variance)
         if abs(bias) <= _NO_BIAS:
-            return float(1.0 - 2.0 * tails.norm.sf(z))
+            return float(1.0 - 2.0 * tails.normal_sf(z))
         if self.vanishing:
             return 0.0
-        return float(tails.norm.cdf(z - bias) - tails.norm.cdf(-z - bias))
+        return float(tails.normal_cdf(z - bias) - tails.normal_cdf(-z - bias))
 
 
 def moments(procedure: LinearProcedure, design: Design, focus: Focus, disturbance: Disturbance) -> Moments | None:

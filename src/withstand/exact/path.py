@@ -137,14 +137,22 @@ class Path:
 
     def _at(self, level: int, block: int) -> tuple[Values, Values, Tilt]:
         if (level, block) not in self._nodes:
-            step = _STEP / 2.0**level
-            inner = np.arange(_BLOCK) if level == 0 else np.arange(1.0, _BLOCK * 2.0**level, 2.0)
-            x = block * _BLOCK * _STEP + inner * step
-            s, weight = hyperbola(self._c, self._scale, self._bend, x)
-            if level == 0 and block == 0:
-                weight[0] *= 0.5
-            self._nodes[level, block] = s, weight, self._tilt(s)
+            if level > 1:
+                self._nodes[level, block] = self._evaluate(np.arange(1.0, _BLOCK * 2.0**level, 2.0) / 2.0**level, block)
+            else:
+                # The first halving is always wanted, and one call for many nodes is cheaper than two.
+                s, weight, found = self._evaluate(np.arange(2.0 * _BLOCK) / 2.0, block)
+                if block == 0:
+                    weight[0] *= 0.5
+                for parity in (0, 1):
+                    those = np.arange(parity, 2 * _BLOCK, 2)
+                    self._nodes[parity, block] = s[those], weight[those], found.at(those)
         return self._nodes[level, block]
+
+    def _evaluate(self, steps: Floats, block: int) -> tuple[Values, Values, Tilt]:
+        """Nodes, weights and tilts at steps counted from the beginning of a block."""
+        s, weight = hyperbola(self._c, self._scale, self._bend, _STEP * (block * _BLOCK + steps))
+        return s, weight, self._tilt(s)
 
 
 def split(found: Tilt, s: Values, d: Floats, whole: Values) -> tuple[Values, Values]:

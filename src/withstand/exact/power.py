@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import numpy as np
 from scipy.optimize import brentq
@@ -10,8 +11,9 @@ from scipy.special import ndtri
 
 from withstand.departures.world import Disturbance
 from withstand.errors import InputError
+from withstand.exact.closed import answering_for
 from withstand.exact.contour import Inverter
-from withstand.exact.problem import pose
+from withstand.exact.problem import Problem, pose
 from withstand.procedures.base import LinearProcedure
 from withstand.study.design import Design, Floats
 from withstand.study.focus import Focus, FocusKind
@@ -49,9 +51,53 @@ def power(
     NumericalError
         If the accuracy wanted (1e-8) is not reached.
     """
-    inverter = _inverter(procedure, design, focus, disturbance, level)
-    shaped = np.asarray(effects, dtype=np.float64).reshape(-1, focus.k)
-    return inverter.probabilities(inverter.problem.to_unit(shaped)).beyond
+    problem = _problem(procedure, design, focus, disturbance, level)
+    wanted = problem.to_unit(np.asarray(effects, dtype=np.float64).reshape(-1, focus.k))
+    return answering_for(problem, wanted).probabilities(wanted).beyond
+
+
+def adjusted_power(
+    procedure: LinearProcedure, design: Design, focus: Focus, disturbance: Disturbance, level: float, effects: Floats
+) -> Floats:
+    """Power of the test with the critical value at which its size is 1 - `level`.
+
+    Parameters
+    ----------
+    procedure, design, focus, disturbance, level, effects
+        As for `power`.
+
+    Returns
+    -------
+    ndarray of shape (E,)
+        In [0, 1].
+
+    Raises
+    ------
+    InputError
+        For a new response, which has no test.
+    NumericalError
+        If the accuracy wanted (1e-8) is not reached.
+
+    Notes
+    -----
+    Size-adjusted power (Davidson & MacKinnon 1998): what a test could do if its critical value were right in this very world.
+    """
+    problem = _problem(procedure, design, focus, disturbance, level)
+    nothing = np.zeros((1, problem.k))
+
+    def scaled(log_factor: float) -> Inverter:
+        return Inverter(replace(problem, threshold=problem.threshold * math.exp(log_factor)))
+
+    def excess(log_factor: float) -> float:
+        return float(scaled(log_factor).probabilities(nothing).beyond[0]) - (1.0 - level)
+
+    step = 0.5 if excess(0.0) > 0.0 else -0.5
+    far = step
+    while excess(far) * step > 0.0:
+        far *= 2.0
+    found = brentq(excess, min(0.0, far), max(0.0, far), xtol=1e-8)
+    shaped = np.asarray(effects, dtype=np.float64).reshape(-1, problem.k)
+    return scaled(float(found)).probabilities(problem.to_unit(shaped)).beyond
 
 
 def detectable_effect(
@@ -92,7 +138,7 @@ def detectable_effect(
         )
     if not 0.0 < power < 1.0:
         raise InputError(f"power is {power:g}", where="power", remedy="Give a number between 0 and 1, as in 0.8.")
-    inverter = _inverter(procedure, design, focus, disturbance, level)
+    inverter = Inverter(_problem(procedure, design, focus, disturbance, level))
 
     def short(effect: float) -> float:
         return power - float(inverter.probabilities(np.array([[effect]])).beyond[0])
@@ -108,11 +154,11 @@ def detectable_effect(
     return float(found) * float(inverter.problem.T[0, 0])
 
 
-def _inverter(procedure: LinearProcedure, design: Design, focus: Focus, disturbance: Disturbance, level: float) -> Inverter:
+def _problem(procedure: LinearProcedure, design: Design, focus: Focus, disturbance: Disturbance, level: float) -> Problem:
     if focus.kind is FocusKind.NEW:
         raise InputError(
             f"'{focus.name}' is a new response, which has no test and so no power",
             where="study.focus",
             remedy='Ask for the mean there: of = "mean".',
         )
-    return Inverter(pose(procedure, design, focus, disturbance, level))
+    return pose(procedure, design, focus, disturbance, level)

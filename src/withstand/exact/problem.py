@@ -137,7 +137,7 @@ def pose(procedure: LinearProcedure, design: Design, focus: Focus, disturbance: 
     k = focus.k
     critical = math.nan if level is None else _critical(procedure, design, frame.A, level)
     mean = None if disturbance.mean is None else root * disturbance.mean
-    bias = -disturbance.target_shift(focus) if mean is None else frame.A @ mean - disturbance.target_shift(focus)
+    bias = 0.0 - disturbance.target_shift(focus) if mean is None else frame.A @ mean - disturbance.target_shift(focus)
     residual = None if mean is None else mean - used.Q @ (used.Q.T @ mean)
     if residual is not None and mean is not None and np.abs(residual).max() <= 1e-13 * np.abs(mean).max():
         residual = None

@@ -97,7 +97,8 @@ class Tilt:
             return self.log_mass - 0.5 * np.log(F) + (0.5 * b**2 + s * d * (2.0 * b + P * d)) / F
         F = self.precision - 2.0 * s[:, None, None] * np.eye(k)
         log_pivots, _ = eliminate(np.moveaxis(F, 0, 2).copy(), k)
-        usable = np.isfinite(log_pivots)
+        # At the very end of its range a real s leaves a pivot that is nothing but rounding, and F may be singular to the solver.
+        usable = np.isfinite(log_pivots) & (np.linalg.slogdet(np.where(np.isfinite(F), F, 0.0))[0] != 0.0)
         right = np.concatenate([self.linear[:, :, None], self.precision @ d.T], axis=2)
         solved = np.full(right.shape, np.nan, dtype=right.dtype)
         solved[usable] = np.linalg.solve(F[usable], right[usable])
@@ -171,9 +172,8 @@ def eliminate(M: Values, count: int) -> tuple[Values, Values]:
     rest : ndarray of shape (m - count, m - count, t)
         The Schur complement.
     """
-    log_pivots = np.zeros(M.shape[2], dtype=M.dtype)
     with np.errstate(all="ignore"):
         for i in range(count):
-            log_pivots += np.log(M[i, i])
-            M[i + 1 :, i + 1 :] -= M[i + 1 :, i, None] * (M[i, i + 1 :] / M[i, i])[None]
-    return log_pivots, M[count:, count:]
+            M[i + 1 :, i + 1 :] -= M[i + 1 :, i, None] * (M[i, i + 1 :] / M[i, i])
+        pivots = np.arange(count)
+        return np.log(M[pivots, pivots]).sum(axis=0), M[count:, count:]

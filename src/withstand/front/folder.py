@@ -74,7 +74,7 @@ def finished(folder: Path) -> bool:
     A run that was started over with a changed scenario and interrupted leaves the tables of the earlier one.
     """
     try:
-        told = from_json((folder / SUMMARY).read_text(encoding="utf-8"))["provenance"]
+        told = dict(from_json((folder / SUMMARY).read_text(encoding="utf-8"))["provenance"])
     except (OSError, ValueError, KeyError, TypeError):
         return False
     try:
@@ -101,4 +101,11 @@ def _forget(ledger: Path) -> None:
         if "--fresh" not in error.remedy:
             raise
     for ending in ("", "-wal", "-shm"):
-        ledger.with_name(ledger.name + ending).unlink(missing_ok=True)
+        try:
+            ledger.with_name(ledger.name + ending).unlink(missing_ok=True)
+        except OSError as error:
+            raise LedgerError(
+                f"the ledger cannot be removed ({(error.strerror or str(error)).lower()})",
+                where=str(ledger),
+                remedy="Remove it by hand, or give another folder with --out.",
+            ) from error

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 
 import pandas as pd
 
@@ -13,11 +14,13 @@ from withstand.lab.budget import what_rows_buy
 from withstand.lab.plan import Axis
 from withstand.lab.progress import Progress
 from withstand.lab.size_answer import SizeAnswer
-from withstand.lab.size_plan import Effort, Targets
+from withstand.lab.size_feared import feared_worlds
+from withstand.lab.size_plan import Effort, Targets, chosen_focus
 from withstand.lab.size_ranges import CornerAnswer, size_over_ranges
 from withstand.lab.sizing import size_study
 from withstand.procedures.base import Procedure
 from withstand.scenario.choices import MOST, chosen_axes, chosen_procedures
+from withstand.scenario.defaults import default_axes
 from withstand.study.study import Study
 
 Departures = Departure | str | Sequence[Departure | str | Sequence[Departure]]
@@ -41,6 +44,7 @@ def size(
     largest: int = 20_000,
     method: str = "auto",
     workers: int = 1,
+    plausible: bool = False,
     progress: Progress | None = None,
 ) -> SizeAnswer:
     """Find the smallest number of rows at which everything asked for is met.
@@ -76,6 +80,9 @@ def size(
         Whether cells that have exact answers get them.
     workers : int
         Worker processes.
+    plausible : bool
+        Whether each departure is taken over the severities that the residuals allow, rather than over its ladder; with no
+        departure named, every one that makes sense for the columns at hand.
     progress : Progress, optional
         Who is told how far it is.
 
@@ -89,9 +96,10 @@ def size(
     InputError
         If something asked for cannot be answered; the message says how to mend it.
     """
+    axes = several_axes(departure, study)
     return find_size(
         study,
-        several_axes(departure, study),
+        default_axes(study)[0] if plausible and not axes else axes,
         several_procedures(procedure, study),
         Targets(holds, power, half_width),
         Effort(seed, repetitions, most, largest, workers=workers, method=method),
@@ -99,6 +107,7 @@ def size(
         focus=focus,
         effect=effect,
         growth=growth,
+        plausible=plausible,
         progress=progress,
     )
 
@@ -114,13 +123,14 @@ def find_size(
     focus: str | None = None,
     effect: float | None = None,
     growth: str | None = None,
+    plausible: bool = False,
     progress: Progress | None = None,
 ) -> SizeAnswer:
-    """The smallest number of rows in every world of the axes; see `size_study`."""
+    """The smallest number of rows in every world of the axes; see `size`, `size_study`."""
     return size_study(
         study,
         procedures,
-        worlds_of(axes),
+        _worlds(study, axes, procedures, effort, focus, plausible),
         targets=targets,
         tolerance=tolerance,
         focus=focus,
@@ -143,13 +153,14 @@ def size_at_corners(
     focus: str | None = None,
     effect: float | None = None,
     growth: str | None = None,
+    plausible: bool = False,
     progress: Progress | None = None,
 ) -> CornerAnswer:
     """The number of rows at every corner of the ranges of uncertain inputs; see `size_over_ranges`."""
     return size_over_ranges(
         study,
         procedures,
-        worlds_of(axes),
+        _worlds(study, axes, procedures, effort, focus, plausible),
         ranges,
         effort=effort,
         targets=targets,
@@ -171,14 +182,24 @@ def rows_buy(
     focus: str | None = None,
     effect: float | None = None,
     growth: str | None = None,
+    plausible: bool = False,
 ) -> pd.DataFrame:
     """What given numbers of rows are good for; see `what_rows_buy`."""
-    return what_rows_buy(study, procedures, rows, worlds_of(axes), focus=focus, effect=effect, rule=growth, effort=effort)
+    worlds = _worlds(study, axes, procedures, effort, focus, plausible)
+    return what_rows_buy(study, procedures, rows, worlds, focus=focus, effect=effect, rule=growth, effort=effort)
 
 
 def worlds_of(axes: Sequence[Axis]) -> tuple[World, ...]:
     """Every axis at every severity of its ladder."""
     return tuple(axis.world(severity) for axis in axes for severity in axis.departure.ladder)
+
+
+def _worlds(
+    study: Study, axes: Sequence[Axis], procedures: Sequence[Procedure], effort: Effort, focus: str | None, plausible: bool
+) -> tuple[World, ...]:
+    if not plausible:
+        return worlds_of(axes)
+    return feared_worlds(replace(study, focus=(chosen_focus(study, focus),)), axes, procedures, effort.seed)
 
 
 def several_axes(departure: Departures, study: Study) -> tuple[Axis, ...]:

@@ -5,6 +5,11 @@ from __future__ import annotations
 from dataclasses import dataclass
 from enum import StrEnum
 
+from withstand.measures.compute import COUNTED
+
+_NOTHING = 1e-9
+"""An exact value within this of the nominal one differs from it by rounding."""
+
 
 class Kind(StrEnum):
     """How a measure stands against its tolerance."""
@@ -88,6 +93,8 @@ class Finding:
         The nearer bound of the accepted range.
     margin : float
         Distance inside the accepted range, as a share of what the tolerance allows; negative outside.
+    nominal : float
+        The value promised when nothing is wrong.
     set_by : str
         Who set the tolerance.
     """
@@ -99,6 +106,7 @@ class Finding:
     high: float
     bound: float
     margin: float
+    nominal: float
     set_by: str
 
     @classmethod
@@ -112,5 +120,15 @@ class Finding:
             high=high,
             bound=aspect.bound(value),
             margin=aspect.margin(value),
+            nominal=aspect.nominal,
             set_by=aspect.set_by,
         )
+
+    @property
+    def spare(self) -> float:
+        """The share of what the tolerance allows that is left: 0 at the bound, 1 at the nominal value and on its harmless side.
+
+        A bias that cannot be told from none has spent nothing.
+        """
+        told = self.measure in COUNTED or not self.low - _NOTHING <= self.nominal <= self.high + _NOTHING
+        return min(self.margin, 1.0) if told else 1.0

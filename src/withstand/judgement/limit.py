@@ -168,7 +168,7 @@ def limit_of(studies: Sequence[Study], procedure: Procedure, focus: Focus, world
 
 
 def _coverage(ratio: float, level: float) -> float:
-    return 1.0 - 2.0 * float(tails.norm.sf(float(tails.norm.isf((1.0 - level) / 2.0)) * ratio))
+    return 1.0 - 2.0 * float(tails.normal_sf(float(tails.normal_isf((1.0 - level) / 2.0)) * ratio))
 
 
 def doublings(growth: Growth) -> list[Study]:
@@ -210,11 +210,11 @@ def _new_response(focus: Focus, realised: Disturbance, level: float) -> float:
     """Coverage of the interval for a new response once the fit itself is known: P(|b + s u| <= z claimed)."""
     if focus.point is None:
         raise TypeError("a focus on a new response has a point")
-    scores = np.asarray(tails.norm.ppf((np.arange(_SCORES) + 0.5) / _SCORES))
+    scores = np.asarray(tails.normal_ppf((np.arange(_SCORES) + 0.5) / _SCORES))
     errors = (scores if realised.law is None else realised.law(scores)) * realised.spread_at(focus.point)
     curved = 0.0
     if realised.mean is not None:
         left = realised.mean - realised.design.Q @ (realised.design.Q.T @ realised.mean)
         curved = float(np.mean(left**2))
-    half = float(tails.norm.isf((1.0 - level) / 2.0)) * math.sqrt(1.0 + curved)
+    half = float(tails.normal_isf((1.0 - level) / 2.0)) * math.sqrt(1.0 + curved)
     return float(np.mean(np.abs(errors) <= half))

@@ -184,7 +184,9 @@ class Inversion:
         return self._severity(self.mesh[0 if value < self.median[0] else -1])
 
     def _severity(self, x: float) -> float:
-        return float(self.law.span.unscale(np.array(x)))
+        # Scaled to and fro, an end of the span comes back with another last digit.
+        ends = self.law.span.severities[[0, -1]]
+        return float(np.clip(self.law.span.unscale(np.array(x)), *ends))
 
     def _cross(self, curve: Floats, value: float, a: int, b: int) -> float:
         rise = curve[b] - curve[a]

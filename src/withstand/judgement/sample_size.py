@@ -197,7 +197,7 @@ class SizeSearch:
 
 def clear_from(delta: float, looks: int, requirements: int) -> float:
     """Standard errors from which a margin is clear of zero, all looks and requirements sharing the accepted error."""
-    return float(tails.norm.isf(delta / (2.0 * looks * requirements)))
+    return float(tails.normal_isf(delta / (2.0 * looks * requirements)))
 
 
 def _largest(ends: Sequence[float | None]) -> float | None:

@@ -97,8 +97,9 @@ def span_of(departure: Departure, design: Design) -> Span:
             return _span(departure, 0.0, np.arcsinh(2.0 * 10.0), lambda s: np.arcsinh(2.0 * s), lambda x: np.sinh(x) / 2.0)
         case Outliers():
             return _span(departure, 0.0, np.arcsinh(50.0 / 4.0), lambda s: np.arcsinh(s / 4.0), lambda x: 4.0 * np.sinh(x))
-    # Other departures, worst-fan among them: from neutral to the end of their own ladder.
-    return _span(departure, departure.neutral, departure.ladder[-1], _same, _same)
+    # Other departures, worst-fan among them: from neutral to the most severe of their own ladder.
+    end = max(departure.ladder)
+    return _span(departure, departure.neutral, end if end > departure.neutral else departure.default_ladder[-1], _same, _same)
 
 
 def _span(departure: Departure, low: float, high: float, scale: Map, unscale: Map) -> Span:
@@ -107,6 +108,9 @@ def _span(departure: Departure, low: float, high: float, scale: Map, unscale: Ma
     below = np.linspace(low, middle, _POINTS_A_SIDE + 1)[:-1] if low < middle else np.empty(0)
     severities = unscale(np.concatenate([below, above]))
     severities[len(below)] = departure.neutral
+    # The ends are round numbers until they have been scaled to and fro.
+    for end in (0, -1):
+        severities[end] = float(f"{severities[end]:.12g}")
     return Span(severities, scale, unscale, departure.neutral)
 
 

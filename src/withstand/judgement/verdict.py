@@ -59,9 +59,14 @@ class Judgement:
 
     @property
     def deciding(self) -> Finding:
-        """The finding the verdict hangs on: the worst offender, or of those that decide, the one nearest to its bound."""
-        kind = {Verdict.GIVES: Kind.OUTSIDE, Verdict.UNSETTLED: Kind.OPEN}.get(self.verdict)
-        return min((f for f in self.findings if kind is None or f.kind is kind), key=lambda f: f.margin)
+        """The finding the verdict hangs on: the worst offender, or of those that decide, the one nearest to its bound.
+
+        Where all hold and several have spent nothing of what they may, it is the first of them: coverage, or size.
+        """
+        if self.verdict is Verdict.HOLDS:
+            return min(self.findings, key=lambda f: f.spare)
+        kind = Kind.OUTSIDE if self.verdict is Verdict.GIVES else Kind.OPEN
+        return min((f for f in self.findings if f.kind is kind), key=lambda f: f.margin)
 
     @property
     def wasteful(self) -> bool:
@@ -133,7 +138,7 @@ def _interval(name: str, estimate: Estimate, tally: Tally, level: float) -> tupl
     if name in COUNTED and independent:
         return clopper_pearson(round(value * tally.replicates), tally.replicates, level)
     tail = (1.0 - level) / 2.0
-    reach = float(tails.norm.isf(tail) if independent else tails.t.isf(tail, tally.units - 1)) * estimate.mc_se
+    reach = float(tails.normal_isf(tail) if independent else tails.t_isf(tail, tally.units - 1)) * estimate.mc_se
     bounds = (0.0, 1.0) if name in COUNTED else (-math.inf, math.inf)
     return max(value - reach, bounds[0]), min(value + reach, bounds[1])
 

@@ -22,6 +22,7 @@ from withstand.lab.size_question import noise_seed
 from withstand.procedures.base import Answer, Procedure
 from withstand.study.focus import Focus, FocusKind
 from withstand.study.growth import growth_of
+from withstand.study.planned import MOST_ROWS
 from withstand.study.study import Study
 
 BUDGET_COLUMNS = (
@@ -85,8 +86,8 @@ def what_rows_buy(
     growth = growth_of(study, rule)
     found = []
     for n in rows:
-        if n < 1:
-            raise ScenarioError(f"{n} rows buy nothing", where="--at", remedy="Give positive whole numbers.")
+        if not 1 <= n <= MOST_ROWS:
+            raise ScenarioError(f"{n} rows are not laid out", where="--at", remedy=f"Give whole numbers from 1 to {MOST_ROWS:,}.")
         grown = growth.at(n)
         for procedure in procedures:
             for world in worlds or (World(),):
@@ -156,15 +157,15 @@ def detectable_effect_at(
     unit = focus.effect if focus.effect is not None and not focus.scalar else np.ones(1)
     A = grown.design.estimator(focus.L)
     spread = np.linalg.solve(A @ A.T, unit) @ unit
-    step = (tails.norm.isf(grown.alpha / 2.0) + tails.norm.ppf(DETECTED)) * grown.error_sd / math.sqrt(float(spread))
-    target = float(tails.norm.ppf(DETECTED))
+    step = (tails.normal_isf(grown.alpha / 2.0) + tails.normal_ppf(DETECTED)) * grown.error_sd / math.sqrt(float(spread))
+    target = float(tails.normal_ppf(DETECTED))
     tried: list[tuple[float, float]] = []
     factor = float(step)
     for _ in range(_STEPS):
         here = replace(focus, effect=factor * unit)
         answers = _answers(grown, n, procedure, here, condition, effort, executor)
         seen = reading(answers, "power")
-        tried.append((factor, float(tails.norm.ppf(min(max(seen.value, 1e-6), 1.0 - 1e-6)))))
+        tried.append((factor, float(tails.normal_ppf(min(max(seen.value, 1e-6), 1.0 - 1e-6)))))
         if abs(seen.value - DETECTED) <= (1e-9 if seen.exact else max(_CLOSE / 4.0, seen.se / 4.0)):
             return factor
         if len(tried) == 1:

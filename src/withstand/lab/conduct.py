@@ -11,8 +11,10 @@ from typing import Any
 from withstand.judgement.headline import headline
 from withstand.judgement.verdict import Judgement
 from withstand.lab.account import library_versions, study_facts, tolerance_record
-from withstand.lab.frames import measures_frame
-from withstand.lab.gather import Effort, Evidence, gather, open_bench
+from withstand.lab.adjusted_power import adjusted_powers
+from withstand.lab.branches import given_pass
+from withstand.lab.frames import CellAnswers, measures_frame
+from withstand.lab.gather import Bench, Effort, Evidence, gather, open_bench
 from withstand.lab.glance import glance
 from withstand.lab.grid import Cell, Grid
 from withstand.lab.judging import verdicts_frame
@@ -67,14 +69,17 @@ def conduct(study: Study, plan: Plan, effort: Effort | None = None, *, simulate:
         with open_bench(grid, effort) as bench:
             evidence = gather(grid, bench)
             tippings = find_tippings(evidence, bench, leading(grid))
+            assessment = Assessment(evidence, residuals, tippings, names)
+            threats = assessment.threats()
+            more = _more(assessment, threats, bench)
     else:
         evidence, tippings = glance(grid, residuals, names, leading(grid))
-    assessment = Assessment(evidence, residuals, tippings, names)
-    threats = assessment.threats()
+        assessment = Assessment(evidence, residuals, tippings, names)
+        threats, more = assessment.threats(), {}
     verdicts = {cell: judgement for cell in evidence.cells if (judgement := evidence.verdict(cell)) is not None}
     return Outcome(
         title=study.name,
-        measures=measures_frame(grid, ((cell, evidence.answers(cell)) for cell in evidence.cells)),
+        measures=measures_frame(grid, ((cell, evidence.answers(cell) | more.get(cell, {})) for cell in evidence.cells)),
         verdicts=verdicts_frame(grid, verdicts),
         tipping=tipping_frame(grid, residuals, tippings, threats, leading(grid)),
         ranking=ranking_frame(assessment, threats),
@@ -85,6 +90,12 @@ def conduct(study: Study, plan: Plan, effort: Effort | None = None, *, simulate:
         provenance=_provenance(grid, evidence, effort, verdicts)
         | {"started": started.isoformat(timespec="seconds"), "seconds": round(time.perf_counter() - clock, 2)},
     )
+
+
+def _more(assessment: Assessment, threats: Sequence[Threatened], bench: Bench) -> dict[Cell, CellAnswers]:
+    """What is found out where procedures are compared and nowhere else."""
+    passed, adjusted = given_pass(assessment, threats, bench), adjusted_powers(assessment, threats, bench)
+    return {cell: passed.get(cell, {}) | adjusted.get(cell, {}) for cell in passed | adjusted}
 
 
 def leading(grid: Grid) -> list[int | None]:

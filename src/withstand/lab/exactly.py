@@ -47,14 +47,15 @@ def exact_answers(grid: Grid, cells: Iterable[Cell]) -> dict[Cell, CellAnswers]:
         base = baselines.get((cell.procedure_index, cell.focus_index), {})
         if values:
             answers[cell] = {
-                name: frames.Answer(_exactly(value, value - base.get(name, math.nan)), "exact", 0, 0)
+                name: frames.Answer(exactly(value, value - base.get(name, math.nan)), "exact", 0, 0)
                 for name in applicable_measures(cell.procedure, cell.focus)
                 if (value := values.get(name)) is not None
             }
     return answers
 
 
-def _exactly(value: float, shift: float) -> Estimate:
+def exactly(value: float, shift: float) -> Estimate:
+    """A value without error."""
     return Estimate(value, 0.0, value, value, shift, 0.0)
 
 

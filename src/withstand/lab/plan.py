@@ -5,6 +5,7 @@ from __future__ import annotations
 import hashlib
 from collections.abc import Sequence
 from dataclasses import dataclass, field
+from functools import cached_property
 from typing import Literal
 
 from withstand.departures.base import Departure
@@ -40,7 +41,7 @@ class Axis:
         """Names the companions; empty without any."""
         return " + ".join(f"{companion.name} {companion.label(severity)}" for companion, severity in self.companions)
 
-    @property
+    @cached_property
     def identity(self) -> str:
         """A text that names the axis with all options but the severity."""
         return " + ".join([self.departure.identity, *(f"{d.identity}={s:.12g}" for d, s in self.companions)])

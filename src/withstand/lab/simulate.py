@@ -12,9 +12,9 @@ from withstand.engine.tally import Feature, Tally
 from withstand.lab.frames import Answer, CellAnswers
 from withstand.lab.grid import Cell
 from withstand.measures.compute import CONFIDENCE, PROPORTIONS, Estimate, measure
-from withstand.measures.names import applicable_measures
+from withstand.measures.names import applicable_measures, conditional_measures
 
-_REACH = float(tails.norm.isf((1.0 - CONFIDENCE) / 2.0))
+_REACH = float(tails.normal_isf((1.0 - CONFIDENCE) / 2.0))
 
 
 def tallies_of(runner: Runner, cells: Iterable[Cell]) -> dict[Cell, Tally]:
@@ -55,7 +55,9 @@ def simulated_answers(
     for cell, tally in tallies.items():
         failures = tally.replicates - round(tally.products[Feature.ONE, Feature.OK] / tally.units * tally.replicates)
         known = known_baseline.get((cell.procedure_index, cell.focus_index), {})
-        computed = measure(tally, applicable_measures(cell.procedure, cell.focus), error_sd)
+        names = applicable_measures(cell.procedure, cell.focus)
+        names += conditional_measures(cell.procedure, cell.focus) if failures else []
+        computed = measure(tally, names, error_sd)
         answers[cell] = {
             name: Answer(_sharpened(name, estimate, known, cell.spot.axis is None), "simulated", tally.replicates, failures)
             for name, estimate in computed.items()

@@ -129,7 +129,8 @@ class SizeAnswer:
     def _choice(self) -> tuple[str, ...]:
         if len(self.sizes) < 2 or self.best is None:
             return ()
-        return (f"The fewest rows: {self.best.procedure}, with {self.best.n}.",)
+        *others, last = (size.procedure for size in self.sizes if size.n == self.n)
+        return (f"The fewest rows: {', '.join(others) + ' and ' if others else ''}{last}, with {self.n}.",)
 
     def as_record(self) -> dict[str, Any]:
         """Everything as plain values, for machines."""

@@ -100,7 +100,7 @@ class Limits:
                 return "the bias stays while the standard error shrinks" if requirement.measure == "bias_in_sd" else ""
             case "half_width" if self._focus.kind is FocusKind.NEW:
                 # What is left when the fit itself is known: the error of the new response.
-                least = float(tails.norm.isf((1.0 - self._study.level) / 2.0)) * self._study.error_sd
+                least = float(tails.normal_isf((1.0 - self._study.level) / 2.0)) * self._study.error_sd
                 return (
                     f"a new response has its own error, and its half width stays above {least:.4g}"
                     if (requirement.margin(least) < 0.0)

@@ -140,7 +140,7 @@ class Look:
         """1 where it is clearly met, -1 where it clearly is not, else 0; the looks share the accepted chance of error."""
         seen = reading(found[self._key(requirement)], requirement.measure)
         chance = spending(self.effort.delta, look) / (LOOKS * len(self.requirements))
-        margin, reach = requirement.margin(seen.value), float(tails.norm.isf(chance / 2.0)) * seen.se
+        margin, reach = requirement.margin(seen.value), float(tails.normal_isf(chance / 2.0)) * seen.se
         return 1 if margin >= reach else -1 if margin < -reach else 0
 
 

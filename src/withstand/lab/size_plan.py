@@ -15,6 +15,7 @@ from withstand.judgement.tolerance import Tolerance
 from withstand.lab.plan import Axis
 from withstand.procedures.base import Answer, LinearProcedure, Procedure
 from withstand.study.focus import Focus
+from withstand.study.planned import MOST_ROWS
 from withstand.study.study import Study
 
 NO_EFFECT = "State the smallest effect that matters, in the study (effect = { ... }) or with --effect."
@@ -46,12 +47,12 @@ class Targets:
 
     def __post_init__(self) -> None:
         if self.power is not None and not 0.0 < self.power < 1.0:
-            remedy = (
-                "Give a share, such as 0.9."
-                if self.power <= 0.0 or self.power > 100.0
-                else (f"Give a share below 1, such as {0.9 if self.power == 1.0 else self.power / 100.0 or 0.9:g}.")
+            meant = self.power / 100.0 if 10.0 <= self.power < 100.0 else 0.9  # per cent, it seems
+            raise ScenarioError(
+                f"the target power is {self.power:g}",
+                where="--power",
+                remedy=f"Give a number between 0 and 1, as in {meant:g}.",
             )
-            raise ScenarioError(f"the target power is {self.power:g}", where="--power", remedy=remedy)
         if self.half_width is not None and not 0.0 < self.half_width < math.inf:
             raise ScenarioError(
                 f"the target half width is {self.half_width:g}",
@@ -96,8 +97,10 @@ class Effort:
     method: str = "auto"
 
     def __post_init__(self) -> None:
-        if self.largest < 4:
-            raise ScenarioError(f"the largest number of rows is {self.largest}", where="--largest", remedy="Give 4 or more.")
+        if not 4 <= self.largest <= MOST_ROWS:
+            raise ScenarioError(
+                f"the largest number of rows is {self.largest}", where="--largest", remedy=f"Give 4 to {MOST_ROWS:,}."
+            )
         if self.method not in ("auto", "simulated"):
             raise ScenarioError(f"unknown method '{self.method}'", where="method", remedy="Known: auto, simulated.")
 

@@ -118,5 +118,5 @@ def _mean(seen: Sequence[float]) -> Answer:
     if se <= _SAME * max(abs(value), 1e-3):
         # The same in every table, as the coverage of OLS under normal errors is.
         return Answer(Estimate(value, 0.0, value, value, np.nan, np.nan), "exact", 0, 0)
-    reach = float(tails.t.isf(0.025, len(seen) - 1)) * se
+    reach = float(tails.t_isf(0.025, len(seen) - 1)) * se
     return Answer(Estimate(value, se, value - reach, value + reach, np.nan, np.nan), "averaged", len(seen), 0)

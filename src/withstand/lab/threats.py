@@ -80,6 +80,19 @@ class Assessment:
                 found += [known[id(threat)] for threat in ranked(one.threat for one in known.values())]
         return found
 
+    def compared(self, threats: Sequence[Threatened]) -> list[Cell]:
+        """Where procedures are compared: with nothing wrong, and at the worst severity of every departure.
+
+        The first threat of a departure and focal quantity names the severity, that of the procedure judged most closely.
+        """
+        places = {(one.axis.identity, one.focus): (one.axis, one.threat.worst.severity) for one in reversed(threats)}
+        found = []
+        for focus in range(len(self.grid.study.focus)):
+            for procedure in range(len(self.grid.plan.procedures)):
+                found.append(self.cells.get(("", 0.0, procedure, focus)))
+                found += [self.cell(*place, procedure, focus) for (_, other), place in places.items() if other == focus]
+        return list(dict.fromkeys(cell for cell in found if cell is not None))
+
     def throughout(self, focus: int, reference: int) -> tuple[str, float] | None:
         """The cheapest procedure that holds at every severity to be feared, with its premium.
 
@@ -89,7 +102,7 @@ class Assessment:
         everywhere = [(axis, severity) for axis in self.grid.possible for severity in self._feared(axis)]
         found = self._cheapest(everywhere, reference, focus)
         asked = [i for i in range(len(plan.procedures)) if (i, focus) not in self.grid.job.refusals]
-        unknown = any(self._verdict(self._cell(*place, i, focus)) is None for i in asked for place in everywhere)
+        unknown = any(self._verdict(self.cell(*place, i, focus)) is None for i in asked for place in everywhere)
         return None if len(asked) < 2 or (unknown and not found[0]) else found
 
     def _feared(self, axis: Axis) -> tuple[float, ...]:
@@ -129,7 +142,8 @@ class Assessment:
     def _side(axis: Axis, severity: float) -> int:
         return -1 if severity < axis.departure.neutral else 1
 
-    def _cell(self, axis: Axis, severity: float, procedure: int, focus: int) -> Cell | None:
+    def cell(self, axis: Axis, severity: float, procedure: int, focus: int) -> Cell | None:
+        """The cell at a severity of an axis; at its neutral value the baseline. None where nothing was looked at."""
         if severity == axis.departure.neutral and not axis.companions:
             return self.cells.get(("", 0.0, procedure, focus))
         return self.cells.get((axis.identity, severity, procedure, focus))
@@ -142,7 +156,7 @@ class Assessment:
         return self._verdicts[cell]
 
     def _spot(self, axis: Axis, severity: float, procedure: int, focus: int) -> Spot | None:
-        cell = self._cell(axis, severity, procedure, focus)
+        cell = self.cell(axis, severity, procedure, focus)
         judgement = self._verdict(cell)
         if cell is None or judgement is None:
             return None
@@ -165,7 +179,7 @@ class Assessment:
         candidates = {}
         places = list(places)
         for i, procedure in enumerate(self.grid.plan.procedures):
-            cells = [self._cell(axis, severity, i, focus) for axis, severity in places]
+            cells = [self.cell(axis, severity, i, focus) for axis, severity in places]
             verdicts = [self._verdict(cell) for cell in cells]
             if verdicts and all(verdict is not None for verdict in verdicts):
                 judged = [verdict.verdict for verdict in verdicts if verdict is not None]

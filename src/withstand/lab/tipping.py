@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from contextlib import suppress
 from dataclasses import dataclass
 
+from withstand.errors import NumericalError
 from withstand.judgement.tipping import Tipping, bracket, next_severity, tipping_exact
 from withstand.judgement.verdict import Judgement
 from withstand.lab.gather import Bench, Evidence, gather
@@ -92,7 +94,11 @@ def find_tippings(evidence: Evidence, bench: Bench, leading: Sequence[int | None
         The procedure judged most closely, by focal quantity: its simulated brackets are narrowed. The others keep the rungs.
     """
     lines = Lines(evidence)
-    found = {line: _root(lines, line) for line in lines.judged if lines.exact(line)}
+    found: dict[Line, Tipping] = {}
+    for line in [line for line in lines.judged if lines.exact(line)]:
+        # Where the accuracy is out of reach between two rungs, the line is treated as a simulated one.
+        with suppress(NumericalError):
+            found[line] = _root(lines, line)
     simulated = [line for line in lines.judged if line not in found]
     _narrow(lines, bench, [line for line in simulated if leading[line.focus] == line.procedure])
     for line in simulated:

@@ -79,9 +79,9 @@ def verification(evidence: Evidence) -> dict[str, Any]:
     return {
         "comparisons": len(compared),
         "beyond_two_errors": far,
-        "expected_beyond_two_errors": 2.0 * float(tails.norm.sf(_FAR)) * len(compared),
+        "expected_beyond_two_errors": 2.0 * float(tails.normal_sf(_FAR)) * len(compared),
         "largest_z": abs(worst.z),
-        "largest_z_by_chance": float(tails.norm.isf(0.005 / len(compared))),
+        "largest_z_by_chance": float(tails.normal_isf(0.005 / len(compared))),
         "largest_at": {
             "departure": "none" if axis is None else axis.departure.name,
             "severity": worst.cell.spot.severity,

@@ -111,6 +111,10 @@ PROPORTIONS = {
 }
 """Measures that are shares of all replicates; a failure covers nothing and rejects nothing."""
 
+GIVEN_ANSWER = {"coverage_given_answer": Feature.COVERED, "size_given_answer": Feature.REJECTED}
+"""Measures that are shares of the replicates with an answer: what is seen by someone who always got one, as where a rule is
+looked at only where its check passed."""
+
 COUNTED = {*PROPORTIONS, "failure_rate"}
 """Measures that count replicates, whether the procedure answered in them or not."""
 
@@ -128,7 +132,8 @@ def _definitions(unit: float) -> dict[str, Value]:
         "rmse": _times(_root(_mean_among_answers(Feature.SQUARE)), unit),
         "failure_rate": _failure_rate,
     }
-    return scaled | {name: _mean_of(feature) for name, feature in PROPORTIONS.items()}
+    shares = {name: _mean_of(feature) for name, feature in PROPORTIONS.items()}
+    return scaled | shares | {name: _mean_among_answers(feature) for name, feature in GIVEN_ANSWER.items()}
 
 
 def _times(inner: Value, factor: float) -> Value:
@@ -153,6 +158,8 @@ MEASURES: dict[str, str] = {
     "power": "share of tests that reject when the stated effect is there",
     "rmse": "root mean square of estimate minus truth",
     "failure_rate": "share of replicates in which the procedure gave no answer",
+    "coverage_given_answer": "share of intervals that hold the true value, among the replicates with an answer",
+    "size_given_answer": "share of tests of a true null hypothesis that reject it, among the replicates with an answer",
 }
 """Every measure with its meaning, in the order of the tables."""
 
@@ -212,8 +219,8 @@ def clopper_pearson(hits: float, count: int, level: float) -> tuple[float, float
         Confidence level.
     """
     tail = (1.0 - level) / 2.0
-    low = 0.0 if hits <= 0 else float(tails.beta.ppf(tail, hits, count - hits + 1))
-    high = 1.0 if hits >= count else float(tails.beta.isf(tail, hits + 1, count - hits))
+    low = 0.0 if hits <= 0 else float(tails.beta_ppf(tail, hits, count - hits + 1))
+    high = 1.0 if hits >= count else float(tails.beta_isf(tail, hits + 1, count - hits))
     return low, high
 
 
@@ -224,13 +231,18 @@ def _spread(gradient: Floats, covariance: Floats) -> float:
 @cache
 def _quantile(df: int) -> float:
     """Student's t; kept, since all measures of a look ask for the same one."""
-    return float(tails.t.isf((1.0 - CONFIDENCE) / 2.0, df))
+    return float(tails.t_isf((1.0 - CONFIDENCE) / 2.0, df))
 
 
 def _interval(name: str, value: float, se: float, tally: Tally) -> tuple[float, float]:
     independent = tally.units == tally.replicates
     if name in COUNTED and independent:
         return clopper_pearson(round(value * tally.replicates), tally.replicates, CONFIDENCE)
-    reach = _quantile(tally.units - 1) * se
-    bounds = (0.0, 1.0) if name in COUNTED else (-math.inf, math.inf)
+    bounds = (0.0, 1.0) if name in COUNTED or name in GIVEN_ANSWER else (-math.inf, math.inf)
+    return monte_carlo_interval(value, se, tally.units, bounds)
+
+
+def monte_carlo_interval(value: float, se: float, units: int, bounds: tuple[float, float]) -> tuple[float, float]:
+    """Student's interval of level CONFIDENCE from independent units, cut at the bounds of the measure."""
+    reach = _quantile(units - 1) * se
     return max(value - reach, bounds[0]), min(value + reach, bounds[1])

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from withstand.measures.compute import MEASURES
+from withstand.measures.compute import GIVEN_ANSWER, MEASURES
 from withstand.procedures.base import Answer, Procedure
 from withstand.study.focus import Focus
 
@@ -19,7 +19,19 @@ _NEEDS = {
     "width": Answer.INTERVAL,
     "size": Answer.TEST,
     "power": Answer.TEST,
+    "coverage_given_answer": Answer.INTERVAL,
+    "size_given_answer": Answer.TEST,
 }
+
+ADJUSTED_POWER = "size_adjusted_power"
+"""Power with the critical value at which the size is nominal; a quantile, which tallies cannot give."""
+
+GIVEN_PASS = {
+    "failure_rate": "pass_rate",
+    "coverage_given_answer": "coverage_given_pass",
+    "size_given_answer": "size_given_pass",
+}
+"""Measures of a rule where its check passed, by those of the rule looked at there alone; of the first it is one minus."""
 
 _SINGLE = {"miss_below", "miss_above", "width"}
 """Measures of an interval, not of a joint region."""
@@ -29,7 +41,7 @@ _CLAIMS = {"claimed_sd", "se_ratio"}
 
 
 def applicable_measures(procedure: Procedure, focus: Focus) -> list[str]:
-    """Names of the measures to report, in the order of the tables.
+    """Names of the measures to report, in the order of the tables; those given an answer are in `conditional_measures`.
 
     Parameters
     ----------
@@ -42,7 +54,7 @@ def applicable_measures(procedure: Procedure, focus: Focus) -> list[str]:
     names = []
     for name in MEASURES:
         need = _NEEDS.get(name)
-        if need is not None and need not in answers:
+        if name in GIVEN_ANSWER or (need is not None and need not in answers):
             continue
         if name in _SINGLE and not focus.scalar:
             continue
@@ -52,3 +64,9 @@ def applicable_measures(procedure: Procedure, focus: Focus) -> list[str]:
             continue
         names.append(name)
     return names
+
+
+def conditional_measures(procedure: Procedure, focus: Focus) -> list[str]:
+    """Names of the measures among the replicates with an answer; worth reporting where there are others."""
+    answers = procedure.answers(focus)
+    return [name for name in GIVEN_ANSWER if _NEEDS[name] in answers]

@@ -123,8 +123,8 @@ class LinearProcedure(Procedure):
         k = A.shape[0]
         df = self.degrees_of_freedom(design, A)
         if k == 1:
-            return float(tails.t.isf((1.0 - level) / 2.0, df))
-        return float(tails.f.isf(1.0 - level, k, df))
+            return float(tails.t_isf((1.0 - level) / 2.0, df))
+        return float(tails.f_isf(1.0 - level, k, df))
 
     def fitted_design(self, design: Design) -> Design:
         """The design actually fitted: with known weights, the weighted one."""

@@ -116,7 +116,7 @@ class Cr2(ClusterRobust):
         if k == 1:
             return super().critical(design, A, level)
         eta = self._hotelling_degrees(design, A)
-        return float(tails.f.isf(1.0 - level, k, eta - k + 1) * eta / (eta - k + 1))
+        return float(tails.f_isf(1.0 - level, k, eta - k + 1) * eta / (eta - k + 1))
 
     def not_applicable(self, design: Design, focus: Focus) -> str | None:
         """See Procedure."""

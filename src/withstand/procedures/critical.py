@@ -25,4 +25,4 @@ def student_critical(k: int, df: float, level: float) -> float:
     float
         Quantile of t(df), or of F(k, df).
     """
-    return float(tails.t.isf((1.0 - level) / 2.0, df)) if k == 1 else float(tails.f.isf(1.0 - level, k, df))
+    return float(tails.t_isf((1.0 - level) / 2.0, df)) if k == 1 else float(tails.f_isf(1.0 - level, k, df))

@@ -61,8 +61,8 @@ class DropOutliers(Procedure):
         bases = [design.basis_rows(focus.L) for focus in foci]
         # All numbers of deleted rows that leave a degree of freedom.
         degrees = np.arange(design.df, 0, -1)
-        t = tails.t.isf((1.0 - level) / 2.0, degrees)
-        criticals = [np.asarray(t if focus.scalar else tails.f.isf(1.0 - level, focus.k, degrees)) for focus in foci]
+        t = tails.t_isf((1.0 - level) / 2.0, degrees)
+        criticals = [np.asarray(t if focus.scalar else tails.f_isf(1.0 - level, focus.k, degrees)) for focus in foci]
 
         def fit(sample: Sample) -> list[Fit]:
             left = _refit(design, sample, self.beyond)

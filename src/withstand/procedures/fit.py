@@ -62,6 +62,13 @@ class Fit(ABC):
         For a joint quantity the confidence region covers `value` where this is false.
         """
 
+    def ratio(self, value: Floats) -> Floats | None:
+        """Test statistic of 'the focal quantity is `value` (k,)' over its critical value, (B,): the test rejects above 1.
+
+        None where the critical value depends on the value asked about, as with bootstraps that impose the null hypothesis.
+        """
+        return None
+
 
 @dataclass(frozen=True, eq=False)
 class WaldFit(Fit):
@@ -113,6 +120,13 @@ class WaldFit(Fit):
             return np.asarray(np.abs(distance[0]) > self.half)
         return np.asarray(wald_statistic(distance, self.covariance) > self.critical)
 
+    def ratio(self, value: Floats) -> Floats | None:
+        """See Fit."""
+        distance = self.estimate - value.reshape(len(self.estimate), -1)
+        if len(self.estimate) == 1:
+            return _over(np.abs(distance[0]), self.half)
+        return np.asarray(wald_statistic(distance, self.covariance) / self.critical)
+
 
 @dataclass(frozen=True, eq=False)
 class IntervalFit(Fit):
@@ -126,12 +140,15 @@ class IntervalFit(Fit):
         Claimed variance of the estimate.
     test : callable, optional
         Maps a value (k,) to rejections (B,). Without it the interval decides.
+    scaled : ndarray of shape (B,), optional
+        Test statistics over their critical value, where the test asks about one value and no other.
     """
 
     low: Floats | None = None
     high: Floats | None = None
     claimed: Floats | None = None
     test: Callable[[Floats], Flags] | None = None
+    scaled: Floats | None = None
 
     @property
     def variance(self) -> Floats | None:
@@ -162,6 +179,19 @@ class IntervalFit(Fit):
         if missed is None:
             raise TypeError("a fit needs an interval or a test")
         return np.asarray(missed[0] | missed[1])
+
+    def ratio(self, value: Floats) -> Floats | None:
+        """See Fit; the distance from the estimate over that of the end on the same side."""
+        if self.test is not None or self.low is None or self.high is None:
+            return self.scaled
+        distance = value[0] - self.estimate[0]
+        return _over(np.abs(distance), np.where(distance > 0.0, self.high - self.estimate[0], self.estimate[0] - self.low))
+
+
+def _over(distance: Floats, half: Floats) -> Floats:
+    """Distances in half widths; infinite beyond an interval without width."""
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return np.asarray(np.where(distance > 0.0, distance / np.maximum(half, 0.0), 0.0))
 
 
 def wald_statistic(distance: Floats, covariance: Floats) -> Floats:

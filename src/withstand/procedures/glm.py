@@ -79,8 +79,8 @@ class LogLink(Procedure):
     def prepare(self, design: Design, foci: Sequence[Focus], level: float) -> Fitter:
         """See Procedure."""
         bases = [design.basis_rows(focus.L) for focus in foci]
-        t = float(tails.t.isf((1.0 - level) / 2.0, design.df))
-        bounds = [float(tails.f.isf(1.0 - level, focus.k, design.df)) for focus in foci]
+        t = float(tails.t_isf((1.0 - level) / 2.0, design.df))
+        bounds = [float(tails.f_isf(1.0 - level, focus.k, design.df)) for focus in foci]
 
         def fit(sample: Sample) -> list[Fit]:
             y = sample.response
@@ -100,8 +100,8 @@ class LogLink(Procedure):
                     fits.append(_mean(estimate[0], t * np.sqrt(covariance[0, 0]), failed))
                 else:
                     covariance = np.where(failed, np.eye(focus.k)[:, :, None], covariance)
-                    rejected = wald_statistic(np.where(failed, 0.0, estimate), covariance) > bound
-                    fits.append(only_a_test(rejected, failed, focus.k))
+                    statistic = wald_statistic(np.where(failed, 0.0, estimate), covariance)
+                    fits.append(only_a_test(statistic, bound, failed, focus.k))
             return fits
 
         return fit

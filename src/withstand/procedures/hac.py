@@ -127,4 +127,4 @@ class HacCosine(LinearProcedure):
         k, nu = A.shape[0], self.cosines(design.n)
         if k == 1:
             return super().critical(design, A, level)
-        return float(tails.f.isf(1.0 - level, k, nu - k + 1) * nu / (nu - k + 1))
+        return float(tails.f_isf(1.0 - level, k, nu - k + 1) * nu / (nu - k + 1))

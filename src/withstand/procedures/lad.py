@@ -33,8 +33,8 @@ def hall_sheather(n: int, level: float) -> float:
     n^(-1/3) z^(2/3) (1.5 phi(0)^2)^(1/3), z the normal quantile of the level (Hall & Sheather 1988); halved until it is below
     1/2, which matters up to 7 rows.
     """
-    z = float(tails.norm.isf((1.0 - level) / 2.0))
-    width = float(n ** (-1.0 / 3.0) * z ** (2.0 / 3.0) * (1.5 * tails.norm.pdf(0.0) ** 2) ** (1.0 / 3.0))
+    z = float(tails.normal_isf((1.0 - level) / 2.0))
+    width = float(n ** (-1.0 / 3.0) * z ** (2.0 / 3.0) * (1.5 * tails.normal_pdf(0.0) ** 2) ** (1.0 / 3.0))
     while width >= 0.5:
         width /= 2.0
     return width
@@ -53,7 +53,7 @@ def bandwidths(residuals: Floats, level: float) -> Floats:
     low, part = int(place), place - int(place)
     lower = ordered[:, low] + part * (ordered[:, low + 1] - ordered[:, low])
     upper = ordered[:, n - 1 - low] - part * (ordered[:, n - 1 - low] - ordered[:, n - 2 - low])
-    width = 2.0 * float(tails.norm.ppf(0.5 + hall_sheather(n, level)))
+    width = 2.0 * float(tails.normal_ppf(0.5 + hall_sheather(n, level)))
     return np.asarray(np.minimum(residuals.std(axis=1), (upper - lower) / _NORMAL_QUARTILES) * width)
 
 

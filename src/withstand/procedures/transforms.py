@@ -63,8 +63,8 @@ class TransformedResponse(Procedure):
     def prepare(self, design: Design, foci: Sequence[Focus], level: float) -> Fitter:
         """See Procedure."""
         bases = [design.basis_rows(focus.L) for focus in foci]
-        t = float(tails.t.isf((1.0 - level) / 2.0, design.df))
-        bounds = [float(tails.f.isf(1.0 - level, focus.k, design.df)) for focus in foci]
+        t = float(tails.t_isf((1.0 - level) / 2.0, design.df))
+        bounds = [float(tails.f_isf(1.0 - level, focus.k, design.df)) for focus in foci]
 
         def fit(sample: Sample) -> list[Fit]:
             z, scale, failed = self.transform(design, sample.response)
@@ -81,17 +81,18 @@ class TransformedResponse(Procedure):
                 else:
                     covariance = (basis @ basis.T)[:, :, None] * s2
                     with np.errstate(divide="ignore", invalid="ignore"):
-                        rejected = wald_statistic(basis @ c, np.where(failed, np.eye(focus.k)[:, :, None], covariance)) > bound
-                    fits.append(only_a_test(rejected, failed, focus.k))
+                        statistic = wald_statistic(basis @ c, np.where(failed, np.eye(focus.k)[:, :, None], covariance))
+                    fits.append(only_a_test(statistic, bound, failed, focus.k))
             return fits
 
         return fit
 
 
-def only_a_test(rejected: Flags, failed: Flags, k: int) -> IntervalFit:
+def only_a_test(statistic: Floats, critical: float, failed: Flags, k: int) -> IntervalFit:
     """A fit that answers no more than whether 'no effect' is rejected."""
-    no_estimate = np.zeros((k, len(rejected)))
-    return IntervalFit(no_estimate, failed if failed.any() else None, test=lambda value: rejected)
+    no_estimate, rejected = np.zeros((k, len(statistic))), statistic > critical
+    found = failed if failed.any() else None
+    return IntervalFit(no_estimate, found, test=lambda value: rejected, scaled=statistic / critical)
 
 
 @dataclass(frozen=True, eq=False)

@@ -10,6 +10,9 @@ from pathlib import Path
 
 from withstand.errors import InputError
 
+PAGE = "report.html"
+"""Name of the page in the folder of a run."""
+
 
 def write_files(folder: Path, contents: Mapping[str, bytes]) -> None:
     """Write files below a folder: all of them beside their places first, then each moved into place.

@@ -42,7 +42,8 @@ def describe(view: View, name: str, focus: str) -> str:
     if name == "premium":
         return (
             f"For each of {listing(view.procedures)}: the width of the interval for {focus} when nothing is wrong, and its "
-            f"coverage under {listing(departures)}. The tables on premium and protection hold the numbers."
+            f"coverage under {listing(departures)}.{_failing(view, focus)} The tables on premium and protection hold the "
+            "numbers."
         )
     if name == "harm":
         return (
@@ -54,6 +55,11 @@ def describe(view: View, name: str, focus: str) -> str:
         f"{name.capitalize()} of {focus} against severity for {listing(view.procedures)}, one panel each for "
         f"{listing(departures)}. {worst} The verdict table holds the numbers."
     )
+
+
+def _failing(view: View, focus: str) -> str:
+    names = [name for name in view.procedures if view.most_failures(name, focus) > 0.0]
+    return f" No answer in some replicates: {listing(names)}." if names else ""
 
 
 def _extreme(view: View, procedure: str, focus: str, measure: str) -> str:

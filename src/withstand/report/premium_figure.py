@@ -8,17 +8,20 @@ from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 from matplotlib.patches import Patch
 
+from withstand.measures.names import ADJUSTED_POWER
 from withstand.report import style
 from withstand.report.view import Axis, View
 from withstand.report.words import percent
 from withstand.report.worry import width_ratio
+
+FAILURES = style.COLOURS[4]
 
 ROW = 0.27
 """Inches a procedure."""
 
 
 def draw_premium(view: View, focus: str) -> Figure:
-    """One row a procedure: width, power beside size, and coverage under every departure.
+    """One row a procedure: width, power beside size, and coverage under every departure; failures are written beside it.
 
     Parameters
     ----------
@@ -47,7 +50,7 @@ def draw_premium(view: View, focus: str) -> Figure:
     if power:
         _draw_power(panels[1], view, names, focus)
     _draw_protection(panels[-1], view, names, focus)
-    _add_legend(figure, view, power)
+    _add_legend(figure, view, focus, power)
     return figure
 
 
@@ -69,6 +72,9 @@ def _draw_power(panel: Axes, view: View, names: list[str], focus: str) -> None:
             reading = view.baseline(name, focus, measure)
             if reading is not None:
                 panel.plot(100.0 * reading.value, row, "s", color=style.COLOURS[2], markerfacecolor=face)
+        adjusted = view.baseline(name, focus, ADJUSTED_POWER)
+        if adjusted is not None:
+            panel.plot(100.0 * adjusted.value, row, "x", color=style.INK, markersize=4.8, zorder=5)
     panel.set_xlim(-4.0, 104.0)
     panel.set_xticks([0, 50, 100])
     panel.set_title("Power")
@@ -93,15 +99,22 @@ def _draw_protection(panel: Axes, view: View, names: list[str], focus: str) -> N
         worst, value = min(under, key=lambda one: one[1])
         panel.plot(float(style.stretched(value)), row, "D", color=style.COLOURS[1], zorder=4)
         panel.plot(float(style.stretched(start.value)), row, "o", color=style.INK, markerfacecolor="white", zorder=5)
-        panel.annotate(
-            f"{percent(value, view.bounds or ())} % {style.drawable(view.name(worst), 26)}", (1.02, row),
-            xycoords=panel.get_yaxis_transform(), va="center", fontsize=6.8,
-        )  # fmt: skip
+        failures = view.most_failures(name, focus)
+        told = f"{percent(value, view.bounds or ())} % {view.name(worst)}"
+        _note(panel, row - (0.2 if failures else 0.0), style.drawable(told, 33, lines=1 if failures else 2), style.INK)
+        if failures:
+            _note(panel, row + 0.24, f"no answer in up to {percent(failures, decimals=2)} %", FAILURES)
     limits = style.padded(shown, 0.04)
     panel.set_xlim(*limits)
     panel.set_xticks(*style.stretched_ticks(*limits, 8))
     panel.set_title("Protection: coverage under each departure")
     panel.set_xlabel("coverage, %")
+
+
+def _note(panel: Axes, row: float, text: str, colour: str) -> None:
+    panel.annotate(
+        text, (1.02, row), xycoords=panel.get_yaxis_transform(), va="center", fontsize=6.8, linespacing=1.0, color=colour
+    )
 
 
 def _under_departures(view: View, procedure: str, focus: str) -> list[tuple[Axis, float]]:
@@ -114,18 +127,20 @@ def _under_departures(view: View, procedure: str, focus: str) -> list[tuple[Axis
     return found
 
 
-def _add_legend(figure: Figure, view: View, power: bool) -> None:
+def _add_legend(figure: Figure, view: View, focus: str, power: bool) -> None:
     ink, colour = style.INK, style.COLOURS
     keys: list[Line2D | Patch] = [
         Line2D([], [], color=ink, linestyle="none", marker="o", markerfacecolor="white", label="nothing wrong"),
         Line2D([], [], color=colour[1], linestyle="none", marker="|", markersize=7.0, label="a departure"),
-        Line2D([], [], color=colour[1], linestyle="none", marker="D", label="the worst, named at the right"),
+        Line2D([], [], color=colour[1], linestyle="none", marker="D", label="the worst, named"),
     ]
     if power:
         keys.append(Line2D([], [], color=colour[2], linestyle="none", marker="s", label="power"))
         keys.append(Line2D([], [], color=colour[2], linestyle="none", marker="s", markerfacecolor="white", label="size"))
+    if any(view.baseline(name, focus, ADJUSTED_POWER) is not None for name in view.procedures):
+        keys.append(Line2D([], [], color=ink, linestyle="none", marker="x", label="power, size-adjusted"))
     if view.bounds is not None:
         keys.append(Patch(facecolor=style.ZONE, edgecolor="#7f9a86", linewidth=0.5, label="tolerance"))
     figure.legend(
-        handles=keys, loc="upper left", bbox_to_anchor=(0.0, 1.0), ncols=len(keys), columnspacing=1.2, handlelength=1.2
+        handles=keys, loc="upper left", bbox_to_anchor=(0.0, 1.0), ncols=len(keys), columnspacing=1.0, handlelength=1.2
     )

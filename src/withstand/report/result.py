@@ -1,16 +1,15 @@
-"""An outcome that can show itself."""
+"""An outcome that can show itself. What draws is loaded when something is drawn: an inspection ends before."""
 
 from __future__ import annotations
 
 from dataclasses import dataclass, fields
 from pathlib import Path
-
-from matplotlib.figure import Figure
+from typing import TYPE_CHECKING
 
 from withstand.lab.outcome import Outcome
-from withstand.report.figures import figure
-from withstand.report.html import fragment
-from withstand.report.write import write_report
+
+if TYPE_CHECKING:
+    from matplotlib.figure import Figure
 
 
 @dataclass(frozen=True, eq=False)
@@ -40,6 +39,8 @@ class Result(Outcome):
         InputError
             If the figure or the focal quantity is unknown, or there are no numbers for it.
         """
+        from withstand.report.figures import figure
+
         return figure(self, name, focus)
 
     def report(self, folder: str | Path) -> Path:
@@ -50,8 +51,12 @@ class Result(Outcome):
         InputError
             If the folder cannot be written to.
         """
+        from withstand.report.write import write_report
+
         return write_report(self, Path(folder))
 
     def _repr_html_(self) -> str:
         """The headline and what to worry about first, for a notebook."""
+        from withstand.report.html import fragment
+
         return fragment(self)

@@ -108,8 +108,11 @@ def _closing(view: View, page: Path | None) -> list[str]:
         lines += _wrapped(f"Gave no answer in some replicates (counted as not covering): {', '.join(sorted(set(failing)))}.")
     lines += [line for notice in outcome.notices for line in _wrapped(f"Note: {notice}", "  ")]
     if outcome.refusals:
-        names = ", ".join(dict.fromkeys(procedure for procedure, _, _ in outcome.refusals))
-        lines += _wrapped(f"Not applicable here: {names}; the page says why.")
+        if page is not None:
+            names = ", ".join(dict.fromkeys(procedure for procedure, _, _ in outcome.refusals))
+            lines += _wrapped(f"Not applicable here: {names}; the page says why.")
+        for procedure, focus, reason in outcome.refusals if page is None else ():
+            lines += _wrapped(f"Not applicable here: {procedure} for {focus}: {reason}.", "  ")
     if page is not None:
         lines.append(f"Full page: {page}")
     return lines

@@ -78,16 +78,19 @@ def restore(folder: Path) -> Outcome:
             where=str(folder),
             remedy="Run the scenario again, or read it with the version that wrote it.",
         )
-    tables = {name: _table(folder / f"{name}.csv", rest["columns"][name]) for name in TABLES}
-    return Outcome(
-        title=rest["title"],
-        headline=tuple(rest["headline"]),
-        facts=rest["facts"],
-        notices=tuple(rest["notices"]),
-        refusals=tuple((procedure, focus, reason) for procedure, focus, reason in rest["refusals"]),
-        provenance=rest["provenance"],
-        **tables,
-    )
+    try:
+        tables = {name: _table(folder / f"{name}.csv", rest["columns"][name]) for name in TABLES}
+        return Outcome(
+            title=rest["title"],
+            headline=tuple(rest["headline"]),
+            facts=rest["facts"],
+            notices=tuple(rest["notices"]),
+            refusals=tuple((procedure, focus, reason) for procedure, focus, reason in rest["refusals"]),
+            provenance=rest["provenance"],
+            **tables,
+        )
+    except (KeyError, TypeError, AttributeError) as error:
+        raise _changed(f"'{SUMMARY}' is not as a run writes it: {error}", folder / SUMMARY) from error
 
 
 def _kinds(frame: pd.DataFrame) -> dict[str, str]:
@@ -120,23 +123,25 @@ def _quoted(text: str) -> str:
 
 
 def _table(path: Path, kinds: dict[str, str]) -> pd.DataFrame:
-    rows = list(csv.reader(io.StringIO(_read(path), newline=""), strict=True))
+    try:
+        rows = list(csv.reader(io.StringIO(_read(path), newline=""), strict=True))
+    except csv.Error as error:
+        raise _changed(f"'{path.name}' is not a table as a run writes it: {error}", path) from error
     if not rows or rows[0] != list(kinds):
-        raise InputError(
-            f"the columns of '{path.name}' are not those that {SUMMARY} names",
-            where=str(path.parent),
-            remedy="The file was changed after the run; run the scenario again.",
-        )
+        raise _changed(f"the columns of '{path.name}' are not those that {SUMMARY} names", path)
     # a table of one empty text column would read its rows as blank lines; no table of an outcome has one column
+    if ragged := [place for place, row in enumerate(rows, 1) if len(row) != len(kinds)]:
+        raise _changed(f"row {ragged[0]} of '{path.name}' has {len(rows[ragged[0] - 1])} cells in place of {len(kinds)}", path)
     columns = list(zip(*rows[1:], strict=True)) or [()] * len(kinds)
     try:
         return pd.DataFrame({name: _column(cells, kind) for (name, kind), cells in zip(kinds.items(), columns, strict=True)})
     except ValueError as error:
-        raise InputError(
-            f"'{path.name}' holds something that is no number: {error}",
-            where=str(path.parent),
-            remedy="The file was changed after the run; run the scenario again.",
-        ) from error
+        raise _changed(f"'{path.name}' holds something that is no number: {error}", path) from error
+
+
+def _changed(what: str, path: Path) -> InputError:
+    remedy = "The file was changed after the run; run the scenario again."
+    return InputError(what, where=str(path.parent), remedy=remedy)
 
 
 def _column(cells: tuple[str, ...], kind: str) -> pd.Series[Any]:

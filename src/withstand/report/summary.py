@@ -4,7 +4,8 @@ from __future__ import annotations
 
 from withstand.lab.outcome import Outcome
 from withstand.report import account, markdown, prose
-from withstand.report.html import provenance_facts
+from withstand.report.comparison import comparisons
+from withstand.report.facts import provenance_facts
 from withstand.report.tables import failures_table, premium_table, protection_table, verdict_table, worry_table
 from withstand.report.view import View, view_of
 
@@ -45,7 +46,9 @@ def _focus(view: View, focus: str) -> list[str]:
     parts.append(markdown.text(account.baseline_sentence(view, lead, focus)))
     parts += [markdown.table(worry_table(view, lead, focus)), markdown.table(premium_table(view, focus))]
     if view.ladders:
-        parts += [markdown.table(protection_table(view, focus)), markdown.table(verdict_table(view, focus))]
+        parts += [markdown.table(protection_table(view, focus))]
+        parts += [markdown.table(table) for table in comparisons(view, focus)]
+        parts.append(markdown.table(verdict_table(view, focus)))
     return parts
 
 

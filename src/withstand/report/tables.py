@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import dataclass
 
+from withstand.measures.names import ADJUSTED_POWER
 from withstand.report.view import BASELINE, Axis, Reading, View
 from withstand.report.words import SIGNS, percent, points, share, short_share
 from withstand.report.worry import turning, width_ratio, worries
@@ -111,7 +112,9 @@ def premium_table(view: View, focus: str) -> Table:
     power = view.has("power", focus)
     detectable = view.has("detectable_effect", focus)
     columns = ["Procedure", "covers", "size", "width ratio"]
-    columns += [*(["power"] if power else []), *(["detectable effect"] if detectable else []), "most failures"]
+    adjusted = power and view.has(ADJUSTED_POWER, focus)
+    columns += [*(["power"] if power else []), *(["power, size-adjusted"] if adjusted else [])]
+    columns += [*(["detectable effect"] if detectable else []), "most failures"]
     rows = []
     for procedure in view.procedures:
         ratio = width_ratio(view, procedure, focus)
@@ -120,6 +123,8 @@ def premium_table(view: View, focus: str) -> Table:
         cells.append(Cell(f"{ratio:.2f}" if ratio == ratio else NO_VALUE))
         if power:
             cells.append(_share_cell(view, view.baseline(procedure, focus, "power"), None))
+        if adjusted:
+            cells.append(_share_cell(view, view.baseline(procedure, focus, ADJUSTED_POWER), None))
         if detectable:
             found = view.baseline(procedure, focus, "detectable_effect")
             cells.append(Cell(NO_VALUE if found is None else f"{found.value:.3g}"))
@@ -127,8 +132,9 @@ def premium_table(view: View, focus: str) -> Table:
         rows.append((Cell(procedure), *cells))
     note = (
         f"Width ratio is the mean width of the interval over that of {view.reference}. Read power beside size: a test that "
-        "rejects too often when there is nothing has its power for free. Most failures is the largest share of replicates "
-        "without an answer in any world; a failure counts as neither covering nor rejecting."
+        "rejects too often when there is nothing has its power for free. Size-adjusted power has the critical value that makes "
+        "the size nominal; it is given where the size is outside the tolerance. Most failures is the largest share of "
+        "replicates without an answer in any world; a failure counts as neither covering nor rejecting."
     )
     return Table(f"Premium, when nothing is wrong: {focus}", tuple(columns), tuple(rows), note=note)
 
@@ -168,9 +174,11 @@ def failures_table(view: View) -> Table | None:
             for procedure in view.procedures:
                 rate = view.reading(axis, severity, procedure, focus, "failure_rate")
                 if rate is not None and rate.failures > 0:
+                    given = view.reading(axis, severity, procedure, focus, "coverage_given_answer")
+                    covers = NO_VALUE if given is None else short_share(given, view.bounds or ())
                     told = (procedure, focus, view.name(axis), label, f"{rate.failures:,} of {rate.repetitions:,}", share(rate))
-                    rows.append(tuple(Cell(text) for text in told))
-    columns = ("Procedure", "focus", "departure", "severity", "failures", "share")
+                    rows.append((*(Cell(text) for text in told), Cell(covers)))
+    columns = ("Procedure", "focus", "departure", "severity", "failures", "share", "covers, where it answered")
     return Table("Replicates without an answer", columns, tuple(rows)) if rows else None
 
 
@@ -230,6 +238,5 @@ def _verdict_cell(view: View, axis: Axis, severity: float, procedure: str, focus
 
 
 def _most_failures(view: View, procedure: str, focus: str) -> Cell:
-    rates = [view.reading(axis, severity, procedure, focus, "failure_rate") for axis, severity, _ in _worlds(view)]
-    worst = max((rate.value for rate in rates if rate is not None), default=0.0)
+    worst = view.most_failures(procedure, focus)
     return Cell(f"{percent(worst, decimals=2)} %" if worst > 0.0 else "none")

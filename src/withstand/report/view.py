@@ -162,6 +162,15 @@ class View:
         """Verdict, the measure that decided it and its value; None where there is none."""
         return self._verdicts.get((axis, severity, procedure, focus))
 
+    def most_failures(self, procedure: str, focus: str) -> float:
+        """The largest share of replicates without an answer, in any world; 0 where it is not reported."""
+        rates = (
+            reading.value
+            for (_, _, name, where, measure), reading in self._readings.items()
+            if (name, where, measure) == (procedure, focus, "failure_rate")
+        )
+        return max(rates, default=0.0)
+
     def has(self, measure: str, focus: str) -> bool:
         """Whether any procedure reports the measure for the focal quantity."""
         return any(self.baseline(procedure, focus, measure) is not None for procedure in self.procedures)

@@ -6,14 +6,13 @@ from pathlib import Path
 
 from withstand.lab.outcome import Outcome
 from withstand.report.figures import as_png, as_svg, figure, shown
-from withstand.report.files import write_files
+from withstand.report.files import PAGE, write_files
 from withstand.report.html import page
 from withstand.report.statement import statement
 from withstand.report.store import stored
 from withstand.report.summary import summary
 from withstand.report.view import view_of
 
-PAGE = "report.html"
 SUMMARY = "summary.md"
 STATEMENT = "statement.md"
 FIGURES = "figures"

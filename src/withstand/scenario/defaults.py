@@ -48,6 +48,8 @@ def default_axes(study: Study) -> tuple[tuple[Axis, ...], tuple[str, ...]]:
     axes: list[Axis] = []
     left_out: list[str] = []
     notices: list[str] = []
+    if FITTED in study.design.columns:
+        notices.append(f"nothing was tried along your column '{FITTED}', a name that stands for the fitted mean; rename it")
     for departure in _candidates(study):
         reason = departure.not_applicable(study.design)
         if reason is not None:
@@ -127,6 +129,10 @@ def _in_model(name: str, study: Study) -> bool:
 def _predictors(study: Study) -> list[str]:
     """Numeric predictors with three or more values, those of the focus first."""
     design = study.design
-    names = [name for name, values in design.columns.items() if _in_model(name, study) and np.unique(values).size > 2]
+    names = [
+        name
+        for name, values in design.columns.items()
+        if name != FITTED and _in_model(name, study) and np.unique(values).size > 2
+    ]
     focal = " ".join(focus.name for focus in study.focus)
     return sorted(names, key=lambda name: name not in focal)

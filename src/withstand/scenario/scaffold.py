@@ -7,7 +7,7 @@ from collections.abc import Mapping
 from dataclasses import fields
 from typing import Any
 
-from withstand.departures import Departure
+from withstand.departures import Departure, HeavyTails
 from withstand.judgement.tolerance import CRITERIA
 from withstand.lab.plan import Plan
 from withstand.procedures.base import REGISTRY as PROCEDURES
@@ -111,6 +111,9 @@ def _departure_lines(departure: Departure) -> list[str]:
     }
     lines = ["", "[[departure]]", f"kind = {toml_value(departure.kind)}   # {departure.title}"]
     lines += [f"{name} = {toml_value(value)}" for name, value in options.items()]
+    if isinstance(departure, HeavyTails) and min(departure.ladder) > 0.0:
+        freedom = [float(f"{1.0 / severity:.12g}") for severity in departure.ladder]
+        return [*lines, f"df = {toml_value(freedom)}   # degrees of freedom of Student's t; fewer are heavier"]
     lines.append(f"severity = {toml_value(departure.ladder)}   # {departure.unit}")
     return lines
 

@@ -75,6 +75,10 @@ class Source:
             return tomllib.loads(self.text)
         except tomllib.TOMLDecodeError as error:
             raise self._syntax_error(str(error)) from error
+        except RecursionError as error:
+            raise ScenarioError(
+                "brackets or braces are nested too deeply to be read", where=self.name, remedy="No key of a scenario needs that."
+            ) from error
 
     def _syntax_error(self, message: str) -> ScenarioError:
         place = _AT_LINE.search(message)

@@ -241,7 +241,7 @@ class Drawn(PlannedColumn):
             return np.exp(np.log(self.mean) - log_variance / 2.0 + np.sqrt(log_variance) * scores)
         if self.low is None or self.high is None:
             raise TypeError("a column is checked before it is drawn")
-        places = tails.norm.cdf(scores)
+        places = tails.normal_cdf(scores)
         if self.law == "integers":
             count = self.high - self.low + 1.0
             return np.asarray(self.low + np.minimum(np.floor(places * count), count - 1.0))
@@ -250,6 +250,10 @@ class Drawn(PlannedColumn):
 
 def _where(name: str, key: str) -> str:
     return f"study.plan.columns.{name}.{key}"
+
+
+_MOST_LABELS = 10_000
+"""A factor with more levels would need more rows than a plan has any use for."""
 
 
 def labels_of(name: str, column: PlannedColumn) -> tuple[str, ...]:
@@ -263,6 +267,12 @@ def labels_of(name: str, column: PlannedColumn) -> tuple[str, ...]:
     if isinstance(column, Levels):
         values = sorted(float(level) for level in column.levels)
     elif isinstance(column, Drawn) and column.law == "integers" and column.low is not None and column.high is not None:
+        if column.high - column.low >= _MOST_LABELS:
+            raise ScenarioError(
+                f"'{name}' stands in C() and can take {column.high - column.low + 1.0:.6g} values",
+                where="study.model",
+                remedy="Take it out of C(), or narrow its range.",
+            )
         values = [float(value) for value in range(int(column.low), int(column.high) + 1)]
     else:
         raise ScenarioError(

@@ -141,7 +141,7 @@ def focal_estimates(study: Study) -> list[dict[str, float]]:
     if study.residuals is None:
         return [{} for _ in study.focus]
     design, sd = _as_fitted(study, study.residuals)
-    critical = float(tails.t.isf(study.alpha / 2.0, design.df))
+    critical = float(tails.t_isf(study.alpha / 2.0, design.df))
     found: list[dict[str, float]] = []
     for focus in study.focus:
         if focus.k > 1:

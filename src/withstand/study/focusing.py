@@ -19,6 +19,8 @@ FocusEntry = str | Mapping[str, Any]
 Effect = float | Sequence[float]
 
 _WHERE = "study.focus"
+_LARGEST = 1e50
+"""Factors beyond, or below its reciprocal, have no square in double precision once a variance is scaled by it."""
 _NUMBER = re.compile(r"(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?\s*\*\s*")
 
 
@@ -79,13 +81,18 @@ def _with_effect(focus: Focus, effect: Effect | None) -> Focus:
         raise ScenarioError(
             f"the effect of '{focus.name}' is {effect}", where="study.effect", remedy="Give the smallest effect that matters."
         )
+    if not np.abs(values).max() <= _LARGEST or np.abs(values).max() < 1.0 / _LARGEST:
+        raise ScenarioError(
+            f"the effect of '{focus.name}' is {effect}", where="study.effect", remedy="Write the data in another unit."
+        )
     return Focus(focus.name, focus.kind, focus.L, focus.null, values, focus.point)
 
 
 def _focus(model: Model, entry: FocusEntry, coefficients: Floats) -> Focus:
     if not isinstance(entry, str):
         return _at_point(model, entry, coefficients)
-    name = " ".join(entry.split())
+    # A name may hold any sign; only what is no name is read as an expression.
+    name = entry if entry in model.terms or entry in model.names else " ".join(entry.split())
     if name in model.terms and name not in model.names:
         return _term(model, name)
     weights = _Expression(model, name).weights()
@@ -143,6 +150,8 @@ class _Expression:
                 self.known.setdefault(term, np.eye(p)[columns[0]])
 
     def weights(self) -> Floats:
+        if self.text in self.known:
+            return self.known[self.text]
         total, rest, sign = np.zeros(len(self.model.names)), self.text, 1.0
         if rest.startswith("-"):
             rest, sign = rest[1:].lstrip(), -1.0
@@ -150,6 +159,12 @@ class _Expression:
             factor = 1.0
             if number := _NUMBER.match(rest):
                 factor, rest = float(number.group(0).rstrip("* \t")), rest[number.end() :]
+                if factor and not 1.0 / _LARGEST <= factor <= _LARGEST:
+                    raise ScenarioError(
+                        f"the factor {factor:g} in '{self.text}' is out of range",
+                        where=_WHERE,
+                        remedy=f"Give a number from {1.0 / _LARGEST:g} to {_LARGEST:g}, or write the data in another unit.",
+                    )
             name = self._longest(rest)
             total += sign * factor * self.known[name]
             rest = rest[len(name) :].lstrip()

@@ -15,6 +15,9 @@ from withstand.errors import FormulaError, ScenarioError, TableError, nearest
 from withstand.study.design import Factor, Floats
 from withstand.study.formula import Formula
 
+_LARGEST = 1e150
+"""Beyond it squares overflow double precision."""
+
 _CONTEXT = {"sqrt": np.sqrt, "log1p": np.log1p, "log2": np.log2}
 """Allowed functions that the formula library does not bring."""
 
@@ -68,6 +71,10 @@ class Model:
             _plain(str(term)) if str(term) != "1" else "Intercept": tuple(range(*part.indices(len(written))))
             for term, part in spec.term_slices.items()
         }
+        if empty := [name for name, columns in terms.items() if not columns]:
+            raise FormulaError(
+                f"`{empty[0]}` in `{formula.text}` makes no column", where="study.model", remedy="Check its options, or drop it."
+            )
         levels = {
             name: tuple(map(str, frame[name].cat.categories))
             for name in formula.columns
@@ -178,13 +185,14 @@ def _evaluated(formula: Formula, side: str, frame: pd.DataFrame) -> Any:
 
 def _finite(matrix: Any, names: tuple[str, ...], frame: pd.DataFrame) -> Floats:
     values = np.ascontiguousarray(np.asarray(matrix, dtype=np.float64))
-    wrong = ~np.isfinite(values)
+    wrong = ~(np.abs(values) <= _LARGEST)
     if wrong.any():
         row, column = np.argwhere(wrong)[0]
         raise TableError(
             f"'{names[column]}' is {values[row, column]:g} there",
             where=f"row {frame.index[row]}",
-            remedy="A logarithm needs a positive number; correct the value or the formula.",
+            remedy="Correct the value or the formula: a logarithm needs a number above 0, a root one of 0 or more, "
+            f"a quotient a divisor other than 0, and nothing may be beyond {_LARGEST:g}.",
         )
     return values
 

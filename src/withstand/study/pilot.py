@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 import pandas as pd
 
+from withstand import tails
 from withstand.errors import TableError
 from withstand.study.columns import Drawn, Levels, PlannedColumn, Shares
 from withstand.study.design import Floats
@@ -110,8 +111,8 @@ class Pilot:
         Exact under normal errors; Student's era, textbook.
         """
         tail = (1.0 - self.level) / 2.0
-        low = error_sd * math.sqrt(df / float(stats.chi2.isf(tail, df)))
-        return low, error_sd * math.sqrt(df / float(stats.chi2.ppf(tail, df)))
+        low = error_sd * math.sqrt(df / float(tails.chi2_isf(tail, df)))
+        return low, error_sd * math.sqrt(df / float(tails.chi2_ppf(tail, df)))
 
     def warning(self, error_sd: float, df: int) -> str:
         """What a reader must know about an error SD that rests on so few rows."""

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import hashlib
-import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from functools import cached_property
@@ -13,6 +12,13 @@ from withstand.errors import ScenarioError
 from withstand.study.columns import PlannedColumn
 from withstand.study.layout import Layout
 from withstand.study.pilot import Pilot
+
+
+MOST_ROWS = 10_000_000
+"""More rows are not laid out: their model matrix alone would fill the memory of a small machine."""
+
+_LARGEST = 1e50
+"""Numbers beyond, or below its reciprocal, have no square in double precision once they are scaled by each other."""
 
 
 @dataclass(frozen=True)
@@ -57,8 +63,10 @@ class StudyPlan:
     seed: int = 1
 
     def __post_init__(self) -> None:
-        if self.rows < 2:
-            raise ScenarioError(f"the plan has {self.rows} rows", where="study.plan.rows", remedy="Give 2 or more.")
+        if not 2 <= self.rows <= MOST_ROWS:
+            raise ScenarioError(
+                f"the plan has {self.rows} rows", where="study.plan.rows", remedy=f"Give a whole number from 2 to {MOST_ROWS:,}."
+            )
         given = [name for name in ("error_sd", "r_squared", "pilot") if getattr(self, name) is not None]
         if len(given) != 1:
             raise ScenarioError(
@@ -68,8 +76,12 @@ class StudyPlan:
                 where="study.plan",
                 remedy="Give one of error_sd, r_squared and pilot.",
             )
-        if self.error_sd is not None and not 0.0 < self.error_sd < math.inf:
-            raise ScenarioError(f"error_sd is {self.error_sd:g}", where="study.plan.error_sd", remedy="Give a positive number.")
+        if self.error_sd is not None and not 1.0 / _LARGEST <= self.error_sd <= _LARGEST:
+            raise ScenarioError(
+                f"error_sd is {self.error_sd:g}",
+                where="study.plan.error_sd",
+                remedy=f"Give a positive number, of a size between {1.0 / _LARGEST:g} and {_LARGEST:g}.",
+            )
         if self.r_squared is not None and not 0.0 < self.r_squared < 1.0:
             raise ScenarioError(
                 f"r_squared is {self.r_squared:g}", where="study.plan.r_squared", remedy="Give a share between 0 and 1."
@@ -77,9 +89,11 @@ class StudyPlan:
         if self.draw not in ("fresh", "once"):
             raise ScenarioError(f"draw is '{self.draw}'", where="study.plan.draw", remedy="Known: fresh, once.")
         for name, value in self.coefficients.items():
-            if not math.isfinite(value):
+            if not abs(value) <= _LARGEST:
                 raise ScenarioError(
-                    f"the coefficient of '{name}' is {value:g}", where="study.plan.coefficients", remedy="Give a number."
+                    f"the coefficient of '{name}' is {value:g}",
+                    where="study.plan.coefficients",
+                    remedy=f"Give a number within {_LARGEST:g} of 0.",
                 )
         if self.columns or self.pilot is None:
             self.layout  # noqa: B018  # checks the columns

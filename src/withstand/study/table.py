@@ -79,10 +79,9 @@ def _content(path: Path) -> tuple[bytes, str]:
     """The bytes and the ending that says the kind."""
     try:
         content = path.read_bytes()
-    except OSError as error:
-        raise TableError(
-            f"the file cannot be read ({(error.strerror or str(error)).lower()})", where=str(path), remedy="Check the path."
-        ) from error
+    except (OSError, ValueError) as error:  # a zero byte in the path is a ValueError
+        reason = getattr(error, "strerror", None) or str(error)
+        raise TableError(f"the file cannot be read ({reason.lower()})", where=str(path), remedy="Check the path.") from error
     ending = path.suffix.lower()
     if ending == ".gz":
         try:
@@ -111,7 +110,7 @@ def _read_text(content: bytes, path: Path, decimal: str) -> pd.DataFrame:
         raise TableError("this is not a text file", where=str(path), remedy="Export the table as csv.")
     delimiter = _delimiter(text, _ending(path))
     try:
-        rows = [[cell.strip() for cell in row] for row in csv.reader(io.StringIO(text), delimiter=delimiter, strict=True)]
+        rows = [[cell.strip() for cell in row] for row in csv.reader(io.StringIO(text, newline=None), delimiter=delimiter, strict=True)]
     except csv.Error as error:
         raise TableError(f"a quoted cell is not closed or not well formed ({error})", where=str(path),
                          remedy="Mend the quotes, or export the table again.") from error  # fmt: skip
