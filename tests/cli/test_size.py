@@ -132,7 +132,10 @@ def test_what_rows_buy(plan, call):
         (["--at", "0"], ["--at", "0"]),
         (["--at", "99999999999999999999"], ["--at", "99999999999999999999", "10,000,000"]),
         (["--largest", "99999999999999999999"], ["--largest", "10,000,000"]),
-        (["--departure", "level-spread", "--severity", "2", "--along", "arm"], ["--departure", "a, b", "`noisy`", "scenario file"]),
+        (
+            ["--departure", "level-spread", "--severity", "2", "--along", "arm"],
+            ["--departure", "a, b", "`noisy`", "scenario file"],
+        ),
         (["--growth", "copy"], ["--growth", "copy"]),
         (["--effect", "q=1"], ["'q'"]),
     ],

@@ -133,3 +133,16 @@ def test_ledger_round_trip():
     np.testing.assert_array_equal(back.tallies[2].pack(), entry.tallies[2].pack())
     assert ledger.read(("job", "world", "hc3")).tasks == 0
     ledger.close()
+
+
+def test_finished_numbers_are_kept_by_key_and_name(tmp_path):
+    path, key, other = tmp_path / "ledger.sqlite", ("job", "world", "ols"), ("job", "none", "ols")
+    first = Ledger(path)
+    first.write_numbers({(key, "a"): (0.1, np.pi), (key, "b"): (), (other, "a"): [2.0]})
+    first.write_numbers({(other, "a"): [3.0]})
+    first.close()
+    again = Ledger(path)
+    assert [again.numbers(key, "a"), again.numbers(key, "b"), again.numbers(other, "a")] == [(0.1, np.pi), (), (3.0,)]
+    assert again.numbers(other, "b") is None
+    assert again.read(key).tasks == 0
+    again.close()

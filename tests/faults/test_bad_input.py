@@ -66,12 +66,17 @@ TABLES = {
     "formula without a response": (GOOD, ["--model", "x"], ["~"]),
     "contrast of unknown levels": (GOOD, ["--model", "y ~ C(g)", "--focus", "g[a] - g[q]"], ["q"]),
     "effect without a number": (GOOD, ["--model", "y ~ x", "--effect", "x"], ["--effect", "'x'"]),
+    "effect beyond all squares": (GOOD, ["--model", "y ~ x", "--effect", "x=1e308"], ["--effect", "1e+308"]),
     "effect of no focus": (GOOD, ["--model", "y ~ x", "--effect", "q=2"], ["q"]),
     "factor of a focus that is infinite": (GOOD, ["--model", "y ~ x", "--focus", "1e400*x"], ["inf", "1e400*x", "1e+50"]),
     "sum of a focus that would overflow": (GOOD, ["--model", "y ~ x", "--focus", "1e308*x + 1e308*x"], ["1e+308"]),
     "term without a column": (GOOD, ["--model", "y ~ x + poly(x, 0)"], ["poly(x, 0)", "no column"]),
     "factor with one level": (table([[*row[:2], "a"] for row in ROWS]), ["--model", "y ~ x + C(g)"], ["`g`", "no column"]),
-    "squares that overflow": (table([[f"{row[0]}e200", *row[1:]] for row in ROWS]), ["--model", "y ~ x"], ["1.2e+200", "row 2"]),
+    "squares that overflow": (
+        table([[f"{row[0]}e200", *row[1:]] for row in ROWS]),
+        ["--model", "y ~ x"],
+        ["1.2e+200", "row 2"],
+    ),
     "quotient by zero": (with_cell(3, 1, "0"), ["--model", "y ~ I(1/x)"], ["row 5", "inf", "divisor"]),
     "level in percent": (GOOD, ["--model", "y ~ x", "--level", "95"], ["95", "--level"]),
     "few repetitions": (GOOD, ["--model", "y ~ x", "--repetitions", "5"], ["5", "--repetitions"]),
@@ -105,8 +110,10 @@ SCENARIOS = {
     "procedure twice": (scenario('[procedures]\nuse = ["ols", "ols"]'), ["ols", "twice"]),
     "cap below the start": (scenario("[simulation]\nrepetitions = 5000\nmost = 1000"), ["most", "1000"]),
     "departure twice in a stack": (
-        scenario('[[departure]]\nkind = "skew"\nwith = [{ kind = "fan", along = "x", severity = 2 }, '
-                 '{ kind = "fan", along = "x", severity = 3 }]'),
+        scenario(
+            '[[departure]]\nkind = "skew"\nwith = [{ kind = "fan", along = "x", severity = 2 }, '
+            '{ kind = "fan", along = "x", severity = 3 }]'
+        ),
         ["departure 1", "'fan along x' acts twice"],
     ),
     "step beyond all gaps": (

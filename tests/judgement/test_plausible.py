@@ -106,14 +106,16 @@ def test_a_fan_that_falls_is_a_ratio_below_one(design):
 def test_companions_act_while_the_severity_is_looked_for(design, laws):
     """Ratios of SDs along one column multiply: 2 on top of 3 is 6 alone."""
     fan, chosen = Fan(along="x"), laws["fan"].chosen
+    # A fan down at 1/3 is a fan up at 3, as another departure: none acts twice in a world.
+    turned = Fan(along="x", direction="down")
     stacked, alone = simulate(
         design,
-        [Request(fan, chosen, np.array([2.0]), ((Fan(along="x"), 3.0),)), Request(fan, chosen, np.array([6.0]))],
+        [Request(fan, chosen, np.array([2.0]), ((turned, 1 / 3),)), Request(fan, chosen, np.array([6.0]))],
         seed=3,
         replicates=200,
     )
     np.testing.assert_allclose(stacked, alone, rtol=1e-9)
-    law = severity_laws(design, [fan], seed=3, companions=[((Fan(along="x"), 3.0),)], replicates=REPLICATES)[0]
+    law = severity_laws(design, [fan], seed=3, companions=[((turned, 1 / 3),)], replicates=REPLICATES)[0]
     # What the companion explains is no longer asked of the departure.
     value = float(np.median(stacked))
     assert law.plausible(value).point == pytest.approx(laws["fan"].plausible(value).point / 3.0, rel=0.05)

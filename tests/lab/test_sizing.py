@@ -7,8 +7,9 @@ from scipy import stats
 
 from withstand.departures import Clusters, Curvature, Fan, HeavyTails, LevelSpread, Serial, Skew, WorstFan
 from withstand.departures.world import World
-from withstand.errors import InputError, ScenarioError
+from withstand.errors import InputError, NumericalError, ScenarioError
 from withstand.judgement.tolerance import Tolerance
+from withstand.lab import exactly
 from withstand.lab.plan import Axis
 from withstand.lab.size_answer import ProcedureSize, SizeAnswer
 from withstand.lab.size_feared import feared_worlds
@@ -69,6 +70,20 @@ def test_everything_asked_for_is_met_at_n_and_not_one_step_before():
             )
         assert met == [False, True]
     assert answer.n == min(size.n for size in answer.sizes)
+
+
+def test_an_exact_answer_out_of_reach_is_simulated(monkeypatch):
+    targets = Targets(holds=False, half_width=0.3)
+    exact = size_study(lamp(), procedures("ols"), targets=targets, effort=QUICK).sizes[0]
+    assert exact.method == "exact"
+
+    def unreachable(*arguments, **options):
+        raise NumericalError("an exact probability was reached to 1.7e-08 only")
+
+    monkeypatch.setattr(exactly, "coverage", unreachable)
+    found = size_study(lamp(), procedures("ols"), targets=targets, effort=QUICK).sizes[0]
+    assert found.method == "simulated"
+    assert found.low <= exact.n <= found.high
 
 
 def test_every_world_counts():

@@ -4,6 +4,8 @@ import pytest
 
 from withstand.departures.dependence import Serial
 from withstand.departures.spread import Fan
+from withstand.errors import NumericalError
+from withstand.lab import judging
 from withstand.lab.conduct import conduct, leading
 from withstand.lab.gather import Effort, gather, open_bench
 from withstand.lab.grid import Grid
@@ -104,3 +106,20 @@ def test_a_stack_starts_from_its_companions_and_not_from_the_baseline(study, mak
     assert outcome.measures.query("measure == 'coverage' and departure == 'serial' and severity == 0")["value"].item() == (
         pytest.approx(fan.item(), abs=1e-8)
     )
+
+
+def test_a_turn_whose_exact_answer_is_out_of_reach_is_bracketed(study, make_plan, monkeypatch):
+    """The rungs have exact answers; between them there are none to the accuracy wanted."""
+    grid = Grid(study, make_plan([Fan(along="hours", severity=(2.0, 6.0))], procedures=("ols",)))
+
+    def unreachable(*arguments, **options):
+        raise NumericalError("an exact probability was reached to 1.0e-01 only")
+
+    with open_bench(grid, Effort(simulate=False)) as bench:
+        evidence = gather(grid, bench)
+        (line,) = find_tippings(evidence, bench, leading(grid))
+        exact = find_tippings(evidence, bench, leading(grid))[line]
+        monkeypatch.setattr(judging, "coverage", unreachable)
+        found = find_tippings(evidence, bench, leading(grid))[line]
+    assert (exact.exact, found.exact) == (True, False)
+    assert found.last_holds < exact.point < found.first_gives

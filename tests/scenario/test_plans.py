@@ -87,6 +87,9 @@ def test_seed_and_draw_decide_the_table(tmp_path):
         ('order = "week"', 'rows = "resampled"', "", "resampled", "draw"),
         ('order = "week"', 'decimal = ","', "", "decimal", "Leave it out"),
         ("rows = 40", "rows = 40\nattrition = 1.0", "attrition", "1", "less than 1"),
+        ("rows = 40", "rows = 99999999999999999999", "rows", "99999999999999999999", "10,000,000"),
+        ("error_sd = 3.0", "error_sd = 1e-308", "error_sd", "1e-308", "between"),
+        ('"site[north]" = 1.5', '"site[north]" = 1e308', "coefficients", "1e+308", "within"),
         ("error_sd = 3.0", 'pilot = "none.csv"', "", "none.csv", ""),
     ],
 )

@@ -120,7 +120,10 @@ def _departure(kind: str, severity: float | None, along: str | None, study: Stud
         if key in ("severity", "along") or not error.where.startswith("departure."):
             where, more = f"--{key}" if key in ("severity", "along") else "--departure", ""
         else:
-            where, more = "--departure", f" There is no option for it: give `{key}` in a scenario file, which size takes as well."
+            where, more = (
+                "--departure",
+                f" There is no option for it: give `{key}` in a scenario file, which size takes as well.",
+            )
         raise type(error)(error.what, where=where, remedy=f"{error.remedy}{more}") from error
 
 

@@ -171,15 +171,15 @@ class Ledger:
             ).fetchone()
             return None if row is None else tuple(np.frombuffer(row[0], dtype="<f8").tolist())
 
-    def write_numbers(self, name: str, found: Mapping[LedgerKey, Sequence[float]]) -> None:
-        """Store finished numbers in one transaction.
+    def write_numbers(self, found: Mapping[tuple[LedgerKey, str], Sequence[float]]) -> None:
+        """Store finished numbers, by key and name, in one transaction.
 
         Raises
         ------
         LedgerError
             If the disk is full or the file cannot be written.
         """
-        rows = [(*key, name, np.asarray(values, dtype="<f8").tobytes()) for key, values in found.items()]
+        rows = [(*key, name, np.asarray(values, dtype="<f8").tobytes()) for (key, name), values in found.items()]
         self._store("INSERT OR REPLACE INTO numbers VALUES (?, ?, ?, ?, ?)", rows)
 
     def _store(self, statement: str, rows: Sequence[tuple[object, ...]]) -> None:

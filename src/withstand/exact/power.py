@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import replace
+from functools import cache
 
 import numpy as np
 from scipy.optimize import brentq
@@ -85,19 +86,27 @@ def adjusted_power(
     problem = _problem(procedure, design, focus, disturbance, level)
     nothing = np.zeros((1, problem.k))
 
-    def scaled(log_factor: float) -> Inverter:
-        return Inverter(replace(problem, threshold=problem.threshold * math.exp(log_factor)))
+    def scaled(factor: float) -> Inverter:
+        return Inverter(replace(problem, threshold=problem.threshold * factor**2))
 
-    def excess(log_factor: float) -> float:
-        return float(scaled(log_factor).probabilities(nothing).beyond[0]) - (1.0 - level)
+    @cache
+    def excess(factor: float) -> float:
+        # On the scale of normal quantiles, where a size is all but straight in the critical value.
+        return _two_sided(float(scaled(factor).probabilities(nothing).beyond[0])) - wanted
 
-    step = 0.5 if excess(0.0) > 0.0 else -0.5
-    far = step
-    while excess(far) * step > 0.0:
-        far *= 2.0
-    found = brentq(excess, min(0.0, far), max(0.0, far), xtol=1e-8)
+    wanted = _two_sided(1.0 - level)
+    step = 1.1 if excess(1.0) < 0.0 else 1.0 / 1.1
+    far = step * wanted / (wanted + excess(1.0))
+    while (excess(far) < 0.0) == (step > 1.0):
+        far *= step**3
+    found = brentq(excess, min(1.0, far), max(1.0, far), xtol=1e-8)
     shaped = np.asarray(effects, dtype=np.float64).reshape(-1, problem.k)
     return scaled(float(found)).probabilities(problem.to_unit(shaped)).beyond
+
+
+def _two_sided(size: float) -> float:
+    """The critical value of a two-sided normal test of a size."""
+    return -float(ndtri(0.5 * max(size, 1e-300)))
 
 
 def detectable_effect(

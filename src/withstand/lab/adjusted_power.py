@@ -9,7 +9,8 @@ from __future__ import annotations
 
 import math
 import uuid
-from collections.abc import Iterable, Sequence
+from collections.abc import Sequence
+from concurrent.futures import Future
 
 import numpy as np
 
@@ -53,17 +54,17 @@ def adjusted_powers(assessment: Assessment, threats: Sequence[Threatened], bench
         Cells whose size is within the tolerance, or whose test has no critical value of its own, are left out.
     """
     evidence, grid = assessment.evidence, assessment.grid
-    found: dict[Cell, CellAnswers] = {}
-    open_cells = []
-    for cell in assessment.compared(threats):
-        if not _off(evidence, cell):
-            continue
-        value = _exact(grid, cell) if evidence.answers(cell)["power"].method == "exact" else None
-        if value is None:
-            open_cells.append(cell)
-        else:
-            found[cell] = {ADJUSTED_POWER: Answer(exactly(value, math.nan), "exact", 0, 0)}
-    for cell, estimate in _simulated(grid, open_cells, bench).items():
+    off = [cell for cell in assessment.compared(threats) if _off(evidence, cell)]
+    exact = [cell for cell in off if evidence.answers(cell)["power"].method == "exact"]
+    simulation = _Simulation(grid, [cell for cell in off if cell not in exact], bench)
+    values = {cell: _exact(grid, cell) for cell in exact}
+    found = {
+        cell: {ADJUSTED_POWER: Answer(exactly(value, math.nan), "exact", 0, 0)}
+        for cell, value in values.items()
+        if value is not None
+    }
+    rest = _Simulation(grid, [cell for cell, value in values.items() if value is None], bench)
+    for cell, estimate in (simulation.answers() | rest.answers()).items():
         failures = evidence.answers(cell)["power"].failures
         found[cell] = {ADJUSTED_POWER: Answer(estimate, "simulated", TASKS * TASK_REPLICATES, failures)}
     return found
@@ -92,46 +93,67 @@ def _exact(grid: Grid, cell: Cell) -> float | None:
     return float(found[0])
 
 
-def _simulated(grid: Grid, cells: Iterable[Cell], bench: Bench) -> dict[Cell, Estimate]:
-    """From the ledger or, where that has none and simulation is allowed, from the noise."""
-    runner = bench.runner(grid)
-    keys = {cell: runner.key((cell.spot.world, cell.procedure_index)) for cell in cells}
-    names = {cell: f"{ADJUSTED_POWER} of {cell.focus_index}" for cell in keys}
-    known = {cell: bench.ledger.numbers(keys[cell], names[cell]) for cell in keys}
-    open_cells = [cell for cell, numbers in known.items() if numbers is None]
-    if open_cells and bench.effort.simulate:
-        ratios = _ratios(grid, open_cells, bench)
-        unit = 1 if grid.study.rows.fixed else grid.job.width
-        for cell in open_cells:
-            pair = ratios.get((cell.spot.world, cell.procedure_index, cell.focus_index))
-            known[cell] = () if pair is None else power_at_size(pair, grid.study.alpha, unit)
-        for name in dict.fromkeys(names.values()):
-            fresh = {keys[cell]: found for cell in open_cells if names[cell] == name and (found := known[cell]) is not None}
-            bench.ledger.write_numbers(name, fresh)
-    units = TASKS * TASK_REPLICATES // (1 if grid.study.rows.fixed else grid.job.width)
-    return {cell: _estimate(numbers[0], numbers[1], units) for cell, numbers in known.items() if numbers}
+class _Simulation:
+    """Cells from the ledger or, where that has none and simulation is allowed, from the noise; it runs while others work.
+
+    Parameters
+    ----------
+    grid : Grid
+        The plan on its study.
+    cells : sequence of Cell
+        Where size-adjusted power is wanted.
+    bench : Bench
+        Where to simulate.
+    """
+
+    def __init__(self, grid: Grid, cells: Sequence[Cell], bench: Bench) -> None:
+        self._grid, self._bench = grid, bench
+        runner = bench.runner(grid)
+        self._keys = {cell: runner.key((cell.spot.world, cell.procedure_index)) for cell in cells}
+        self._known = {cell: bench.ledger.numbers(key, _name(cell)) for cell, key in self._keys.items()}
+        self._open = [cell for cell, numbers in self._known.items() if numbers is None and bench.effort.simulate]
+        self._futures: list[Future[Ratios]] = self._submitted() if self._open else []
+
+    def _submitted(self) -> list[Future[Ratios]]:
+        active: dict[int, list[int]] = {}
+        for world, procedure in sorted({(cell.spot.world, cell.procedure_index) for cell in self._open}):
+            active.setdefault(world, []).append(procedure)
+        executor = self._bench.executor
+        self._bench.effort.progress.phase("size-adjusted power", TASKS)
+        job, token = parcel(self._grid.job, executor), uuid.uuid4().hex
+        return [executor.submit(run_ratios, job, token, task, active) for task in range(TASKS)]
+
+    def answers(self) -> dict[Cell, Estimate]:
+        """Size-adjusted power of every cell that has one."""
+        unit = 1 if self._grid.study.rows.fixed else self._grid.job.width
+        if self._futures:
+            ratios, alpha = self._collected(), self._grid.study.alpha
+            pairs = {cell: ratios.get((cell.spot.world, cell.procedure_index, cell.focus_index)) for cell in self._open}
+            found = {cell: () if pair is None else power_at_size(pair, alpha, unit) for cell, pair in pairs.items()}
+            self._bench.ledger.write_numbers({(self._keys[cell], _name(cell)): numbers for cell, numbers in found.items()})
+            self._known |= found
+        units = TASKS * TASK_REPLICATES // unit
+        return {cell: _estimate(numbers[0], numbers[1], units) for cell, numbers in self._known.items() if numbers}
+
+    def _collected(self) -> Ratios:
+        results = []
+        try:
+            for future in self._futures:
+                results.append(future.result())
+                self._bench.effort.progress.step()
+        finally:
+            for future in self._futures:
+                future.cancel()
+        return {key: np.concatenate([result[key] for result in results], axis=1) for key in results[0]}
+
+
+def _name(cell: Cell) -> str:
+    """Under which the ledger keeps it."""
+    return f"{ADJUSTED_POWER} of {cell.focus_index}"
 
 
 def _estimate(power: float, se: float, units: int) -> Estimate:
     return Estimate(power, se, *monte_carlo_interval(power, se, units, (0.0, 1.0)), math.nan, math.nan)
-
-
-def _ratios(grid: Grid, cells: Iterable[Cell], bench: Bench) -> Ratios:
-    active: dict[int, list[int]] = {}
-    for world, procedure in sorted({(cell.spot.world, cell.procedure_index) for cell in cells}):
-        active.setdefault(world, []).append(procedure)
-    bench.effort.progress.phase("size-adjusted power", TASKS)
-    job, token = parcel(grid.job, bench.executor), uuid.uuid4().hex
-    futures = [bench.executor.submit(run_ratios, job, token, task, active) for task in range(TASKS)]
-    results = []
-    try:
-        for future in futures:
-            results.append(future.result())
-            bench.effort.progress.step()
-    finally:
-        for future in futures:
-            future.cancel()
-    return {key: np.concatenate([result[key] for result in results], axis=1) for key in results[0]}
 
 
 def power_at_size(pair: Floats, alpha: float, unit: int = 1) -> tuple[float, float] | tuple[()]:

@@ -87,7 +87,9 @@ def what_rows_buy(
     found = []
     for n in rows:
         if not 1 <= n <= MOST_ROWS:
-            raise ScenarioError(f"{n} rows are not laid out", where="--at", remedy=f"Give whole numbers from 1 to {MOST_ROWS:,}.")
+            raise ScenarioError(
+                f"{n} rows are not laid out", where="--at", remedy=f"Give whole numbers from 1 to {MOST_ROWS:,}."
+            )
         grown = growth.at(n)
         for procedure in procedures:
             for world in worlds or (World(),):

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from contextlib import suppress
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from withstand.errors import NumericalError
 from withstand.judgement.tipping import Tipping, bracket, next_severity, tipping_exact
@@ -102,7 +102,7 @@ def find_tippings(evidence: Evidence, bench: Bench, leading: Sequence[int | None
     simulated = [line for line in lines.judged if line not in found]
     _narrow(lines, bench, [line for line in simulated if leading[line.focus] == line.procedure])
     for line in simulated:
-        found[line] = bracket(lines.judged[line], lines.axes[line.axis].departure.neutral)
+        found[line] = replace(bracket(lines.judged[line], lines.axes[line.axis].departure.neutral), exact=False)
     return found
 
 

@@ -112,7 +112,8 @@ def _closing(view: View, page: Path | None) -> list[str]:
             names = ", ".join(dict.fromkeys(procedure for procedure, _, _ in outcome.refusals))
             lines += _wrapped(f"Not applicable here: {names}; the page says why.")
         for procedure, focus, reason in outcome.refusals if page is None else ():
-            lines += _wrapped(f"Not applicable here: {procedure} for {focus}: {reason}.", "  ")
+            why = reason.removeprefix("not applicable, because ")
+            lines += _wrapped(f"Not applicable here: {procedure} for {focus}, because {why}.", "  ")
     if page is not None:
         lines.append(f"Full page: {page}")
     return lines

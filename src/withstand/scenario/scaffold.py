@@ -119,4 +119,4 @@ def _departure_lines(departure: Departure) -> list[str]:
 
 
 def _comment(text: str) -> list[str]:
-    return [f"# {line}" for line in textwrap.wrap(text, 118)]
+    return [f"# {line}" for line in textwrap.wrap(text, 118, break_on_hyphens=False)]

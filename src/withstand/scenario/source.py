@@ -77,7 +77,9 @@ class Source:
             raise self._syntax_error(str(error)) from error
         except RecursionError as error:
             raise ScenarioError(
-                "brackets or braces are nested too deeply to be read", where=self.name, remedy="No key of a scenario needs that."
+                "brackets or braces are nested too deeply to be read",
+                where=self.name,
+                remedy="No key of a scenario needs that.",
             ) from error
 
     def _syntax_error(self, message: str) -> ScenarioError:

@@ -73,7 +73,9 @@ class Model:
         }
         if empty := [name for name, columns in terms.items() if not columns]:
             raise FormulaError(
-                f"`{empty[0]}` in `{formula.text}` makes no column", where="study.model", remedy="Check its options, or drop it."
+                f"`{empty[0]}` in `{formula.text}` makes no column",
+                where="study.model",
+                remedy="Check its options, or drop it.",
             )
         levels = {
             name: tuple(map(str, frame[name].cat.categories))

@@ -13,7 +13,6 @@ from withstand.study.columns import PlannedColumn
 from withstand.study.layout import Layout
 from withstand.study.pilot import Pilot
 
-
 MOST_ROWS = 10_000_000
 """More rows are not laid out: their model matrix alone would fill the memory of a small machine."""
 
@@ -65,7 +64,9 @@ class StudyPlan:
     def __post_init__(self) -> None:
         if not 2 <= self.rows <= MOST_ROWS:
             raise ScenarioError(
-                f"the plan has {self.rows} rows", where="study.plan.rows", remedy=f"Give a whole number from 2 to {MOST_ROWS:,}."
+                f"the plan has {self.rows} rows",
+                where="study.plan.rows",
+                remedy=f"Give a whole number from 2 to {MOST_ROWS:,}.",
             )
         given = [name for name in ("error_sd", "r_squared", "pilot") if getattr(self, name) is not None]
         if len(given) != 1:

@@ -110,7 +110,10 @@ def _read_text(content: bytes, path: Path, decimal: str) -> pd.DataFrame:
         raise TableError("this is not a text file", where=str(path), remedy="Export the table as csv.")
     delimiter = _delimiter(text, _ending(path))
     try:
-        rows = [[cell.strip() for cell in row] for row in csv.reader(io.StringIO(text, newline=None), delimiter=delimiter, strict=True)]
+        rows = [
+            [cell.strip() for cell in row]
+            for row in csv.reader(io.StringIO(text, newline=None), delimiter=delimiter, strict=True)
+        ]
     except csv.Error as error:
         raise TableError(f"a quoted cell is not closed or not well formed ({error})", where=str(path),
                          remedy="Mend the quotes, or export the table again.") from error  # fmt: skip
