@@ -97,7 +97,7 @@ class Tilt:
             return self.log_mass - 0.5 * np.log(F) + (0.5 * b**2 + s * d * (2.0 * b + P * d)) / F
         F = self.precision - 2.0 * s[:, None, None] * np.eye(k)
         log_pivots, _ = eliminate(np.moveaxis(F, 0, 2).copy(), k)
-        # At the very end of its range a real s leaves a pivot that is nothing but rounding, and F may be singular to the solver.
+        # At the very end of its range a real s leaves a pivot that is nothing but rounding; F may be singular to the solver.
         usable = np.isfinite(log_pivots) & (np.linalg.slogdet(np.where(np.isfinite(F), F, 0.0))[0] != 0.0)
         right = np.concatenate([self.linear[:, :, None], self.precision @ d.T], axis=2)
         solved = np.full(right.shape, np.nan, dtype=right.dtype)
@@ -141,7 +141,7 @@ def tilt(structure: Structure, theta: Values, k: int, added: float) -> Tilt:
         bordered[p:, p:] = pieces.A
         log_pivots, rest = eliminate(bordered, 2 * p - k)
         log_mass = -0.5 * (pieces.log_determinant + log_pivots)
-        precision = np.moveaxis(rest[:k, :k], 2, 0)
+        precision = rest[:k, :k].transpose(2, 0, 1)
         linear = np.zeros((theta.size, k), dtype=rest.dtype)
         if r > p:
             log_mass = log_mass - 0.5 * rest[k, k]
