@@ -1,6 +1,7 @@
 """Help and lists: quick, complete, and light."""
 
 import json
+import os
 import subprocess
 import sys
 
@@ -25,6 +26,18 @@ def test_help_imports_nothing_heavy(arguments):
     done = subprocess.run([sys.executable, "-c", code, *arguments], capture_output=True, text=True, check=True)
     assert done.stderr.strip() == "0 []"
     assert done.stdout.startswith(("Usage: withstand", "withstand 0."))
+
+
+def test_inspect_loads_no_figures_and_no_distributions(folder):
+    """Each of them takes longer to load than the exact answers of a small study take."""
+    code = (
+        "import sys; from withstand.cli.entry import status; code = status(['inspect', 'small.toml']); "
+        "print(code, sorted({'matplotlib', 'scipy.stats', 'dask', 'jinja2'} & set(sys.modules)), file=sys.stderr)"
+    )
+    environment = os.environ | {"PYTHONPATH": os.pathsep.join(sys.path)}
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True, env=environment)
+    assert done.stderr.strip() == "0 []"
+    assert "Tolerance" in done.stdout
 
 
 def test_there_is_every_command():
