@@ -66,7 +66,7 @@ class ProcedureSize:
     instead: tuple[str, ...] = ()
 
 
-@dataclass(frozen=True, eq=False)
+@dataclass(frozen=True, eq=False, repr=False)
 class SizeAnswer:
     """What was found.
 
@@ -131,6 +131,9 @@ class SizeAnswer:
             return ()
         *others, last = (size.procedure for size in self.sizes if size.n == self.n)
         return (f"The fewest rows: {', '.join(others) + ' and ' if others else ''}{last}, with {self.n}.",)
+
+    def __repr__(self) -> str:
+        return "\n".join([self.title, *self.sentences])
 
     def as_record(self) -> dict[str, Any]:
         """Everything as plain values, for machines."""
